@@ -1,0 +1,1 @@
+"""Scores grabbed frames of a test pattern."""

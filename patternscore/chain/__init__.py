@@ -1,0 +1,1 @@
+"""A model of an analogue chain: a picture in, a frame with known truth out."""

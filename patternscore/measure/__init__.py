@@ -1,0 +1,1 @@
+"""Measures: located features in, readings out; pure functions of arrays."""

@@ -1,0 +1,1 @@
+"""Reports: what a person or another program reads of a card."""
