@@ -238,7 +238,8 @@ def _bursts() -> tuple[Burst, ...]:
 
 def _rulers() -> tuple[Ruler, ...]:
     along = tuple(bool(bit) for bit in orientable_sequence(H_BARS, H_ORDER))
-    down = tuple(bool(bit) for bit in orientable_sequence(V_BARS, V_ORDER))
+    # Of the orders found, one that changes at the last bar too: the crush at the bottom is read there.
+    down = tuple(bool(bit) for bit in orientable_sequence(V_BARS, V_ORDER, seed=8))
     deep_x, deep_y = RULER_DEPTH / COLUMNS, RULER_DEPTH / ROWS
     own_x, own_y = round(deep_x * H_BARS), round(deep_y * V_BARS)  # bars that a corner takes
     xs = tuple(i / H_BARS for i in range(H_BARS + 1))
