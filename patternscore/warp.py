@@ -85,7 +85,7 @@ def fit_warp(
     if weights is not None:
         design, target = design * weights[:, None], target * weights[:, None]
     coefficients, *_ = np.linalg.lstsq(design, target, rcond=None)
-    return Warp(coefficients, degree)
+    return Warp(np.asarray(coefficients, dtype=np.float64), degree)
 
 
 def raster_warp(raster: Raster) -> Warp:

@@ -15,7 +15,7 @@ from patternscore.layout import BURST_STRIP, BURSTS_MHZ, COLUMNS, LABEL_CELLS, R
 from patternscore.plan import Plan
 
 INK = 95.0  # IRE
-SMALL, LARGE = 0.15 / ROWS, 0.19 / ROWS  # cap heights, fractions of the picture height
+SMALL = 0.13 / ROWS  # cap heights, fractions of the picture height
 
 Label = tuple[str, float, float, float, float, str]
 
@@ -24,10 +24,10 @@ def labels(plan: Plan) -> list[Label]:
     """Words on the chart: text, x, y of the baseline, cap height, level, anchor."""
     found = [_at(text, x, 2.075, SMALL) for text, x in _burst_labels()]
     cells = dict(zip(("pattern", "line", "left", "right", "dark", "light"), LABEL_CELLS, strict=True))
-    found += _stacked("patternscore", None, cells["pattern"])
+    found += _stacked("pattern", "score", cells["pattern"])
     found += _stacked(plan.standard, "4:3", cells["line"])
-    found += _stacked("IRE", "0 - 76", cells["dark"])
-    found += _stacked("IRE", "82 - 100", cells["light"])
+    found += _stacked("IRE", "0-76", cells["dark"])
+    found += _stacked("IRE", "82-100", cells["light"])
     return found
 
 
@@ -43,11 +43,9 @@ def _at(text: str, x: float, y: float, height: float) -> Label:
     return text, x / COLUMNS, y / ROWS, height, INK, "middle"
 
 
-def _stacked(upper: str, lower: str | None, cell: tuple[int, int]) -> list[Label]:
-    """One or two words, one over the other, in the middle of a cell."""
+def _stacked(upper: str, lower: str, cell: tuple[int, int]) -> list[Label]:
+    """Two words, one over the other, in the middle of a cell."""
     x, y = cell[0] + 0.5, cell[1] + 0.5
-    if lower is None:
-        return [_at(upper, x, y + 0.06, 0.1 / ROWS)]
     return [_at(upper, x, y - 0.07, SMALL), _at(lower, x, y + 0.21, SMALL)]
 
 
