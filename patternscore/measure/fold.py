@@ -1,0 +1,192 @@
+"""Whether the scan folds back at an edge of the picture, and for how long.
+
+Where the forward code of the rulers runs up to blanking, or stops at a black border, there is no fold. Where
+something else stands before the forward code begins, a scan that folds there is fitted to the whole strip. It
+is believed only if it explains the strip far better than a scan that does not fold.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from patternscore.errors import Unreadable
+from patternscore.measure.foldfit import LEAST, View, fit_fold
+from patternscore.measure.foldmodel import Band, unfolded
+from patternscore.measure.ruler import Bars
+from patternscore.measure.stepshape import StepShape
+from patternscore.plan import Plan, Ruler, Side
+from patternscore.reading import Estimate
+
+Array = npt.NDArray[np.float64]
+DEPTH = 0.46  # picture fraction that a fold of 2.5 us at 8 times scan speed can show, and some more
+PLAIN = 0.10  # rms misfit, of the bars' contrast, up to which the unfolded scan is taken as it is
+BETTER = 0.3  # part of the unfolded scan's squared misfit that the folded one may leave
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Fold:
+    """A fold, or its absence.
+
+    Attributes
+    ----------
+    length : Estimate
+        Samples or lines; 0 where the scan does not fold.
+    turning, ratio : float or None
+        Frame coordinate of the turning point, and backward over forward speed.
+    misfit : (float, float)
+        rms departure, of the bars' contrast, from a scan that does not fold and from the one believed.
+    """
+
+    length: Estimate
+    turning: float | None = None
+    ratio: float | None = None
+    misfit: tuple[float, float] = (0.0, 0.0)
+
+
+def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float) -> View:
+    """Look at one edge of the picture.
+
+    Parameters
+    ----------
+    plan : Plan
+        The chart.
+    bars : list of Bars
+        Rulers along the axis that meets this edge.
+    side : {"left", "right", "top", "bottom"}
+        The edge.
+    start : float
+        Frame coordinate at which the active line (the picture lines) starts or ends there.
+
+    Raises
+    ------
+    Unreadable
+        If the forward code is not found near this edge.
+    """
+    far = side in ("right", "bottom")
+    count = bars[0].strip.mean.size
+    bands, certified, length = [], [], 0.0
+    for one in bars:
+        found = _band(plan, one, side, far)
+        if found is not None:
+            bands.append(found[0])
+            certified.append(found[1])
+            length = abs(float(found[0].slope(0.0))) / _bars_across(one.strip.ruler)
+    if not bands:
+        raise Unreadable(f"no ruler is seen near the {side} edge")
+    return View(tuple(bands), count - 1 - start if far else start, length, min(certified))
+
+
+def _bars_across(ruler: Ruler) -> float:
+    return len(ruler.bits) / (ruler.boundaries[-1] - ruler.boundaries[0])
+
+
+def _band(plan: Plan, bars: Bars, side: Side, far: bool) -> tuple[Band, float] | None:
+    """One band seen from the edge, and where its forward code begins; None where it cannot be used."""
+    strip = bars.strip
+    count = strip.mean.size
+    edge_rows = strip.seen[-1 - np.arange(count // 6)] if far else strip.seen[: count // 6]
+    if edge_rows.mean() < 0.95:
+        return None
+    at = 1.0 - bars.at[::-1] if far else bars.at
+    place = count - 1 - bars.place[::-1] if far else bars.place
+    good = bars.good[::-1] if far else bars.good
+    near = np.flatnonzero(at < 0.5)
+    wrong = np.flatnonzero(~good[near])
+    first = int(wrong[-1]) + 1 if wrong.size else 0
+    use = near[first:]
+    if use.size < 6 or at[use[0]] > 0.16:
+        return None
+    forward = _forward(at[use], place[use], _bars_across(strip.ruler))
+    u = np.arange(count) * (2.0 / count) - 1.0
+    polyval = np.polynomial.polynomial.polyval
+    swing = polyval(u, bars.swing)
+    level = (strip.mean - polyval(u, bars.base)) / swing
+    walls, content = _content(plan, strip.ruler, side, far)
+    black = -float(bars.base[0]) / float(bars.swing[0])
+    shape = bars.shape
+    if far:
+        level, shape = level[::-1], StepShape(1.0 - shape.table[::-1], shape.width)
+    noise = float(np.sqrt(np.mean(strip.scatter**2))) / bars.contrast
+    content = np.concatenate([[black], content])
+    return Band(level, walls, content, shape, forward, noise), float(place[use[0]])
+
+
+def _forward(at: Array, place: Array, bars: float) -> Array:
+    """Forward scan near the edge: a parabola through certified bar edges clear of the turn."""
+    clear = at >= at[0] + 1.5 / bars
+    clear &= at <= at[0] + 0.4
+    x = at[clear]
+    design = np.stack([np.ones_like(x), x, x * x], 1)
+    # The curve is held back a little: an edge or two must not bend it.
+    normal = design.T @ design + np.diag([0.0, 0.0, 1e-6])
+    return np.asarray(np.linalg.solve(normal, design.T @ place[clear]))
+
+
+def _content(plan: Plan, ruler: Ruler, side: Side, far: bool) -> tuple[Array, Array]:
+    """Walls and levels of a band from the edge inwards, runs of like bars joined."""
+    walls = np.asarray(ruler.boundaries)
+    bits = np.asarray(ruler.bits, dtype=np.float64)
+    if far:
+        walls, bits = 1.0 - walls[::-1], bits[::-1]
+    if walls[0] > 1e-6:  # the corner belongs to the ruler that runs along this edge
+        walls = np.concatenate([[0.0], walls])
+        bits = np.concatenate([[_corner(plan, ruler, side)], bits])
+    keep = np.concatenate([[True], bits[1:] != bits[:-1]]) & (walls[:-1] < DEPTH)
+    return walls[:-1][keep], bits[keep]
+
+
+def _corner(plan: Plan, ruler: Ruler, side: Side) -> float:
+    """Mean level, 0 to 1, of the crossing ruler's bars within the band of a ruler."""
+    crossing = next((other for other in plan.rulers if other.side == side), None)
+    if crossing is None:
+        return 0.0
+    low, high = ruler.band
+    margin = 0.14 * (high - low)
+    low, high = low + margin, high - margin
+    walls = np.asarray(crossing.boundaries)
+    inside = np.maximum(np.minimum(walls[1:], high) - np.maximum(walls[:-1], low), 0.0)
+    total = float(inside.sum())
+    return float(inside @ np.asarray(crossing.bits, dtype=np.float64)) / total if total > 0 else 0.0
+
+
+def find_fold(view: View, edge_sigma: float) -> Fold:
+    """Decide for or against a fold and measure it.
+
+    Parameters
+    ----------
+    view : View
+        The edge of the picture.
+    edge_sigma : float
+        Standard deviation of a bar edge, samples or lines.
+
+    Returns
+    -------
+    Fold
+        Of length 0 where the scan does not fold.
+
+    Raises
+    ------
+    Unreadable
+        If something stands before the forward code that no fold explains.
+    """
+    low = max(0, int(np.ceil(view.start - 0.8 * view.bar)))
+    t = np.arange(low, int(view.certified + 3.0 * view.bar) + 1, dtype=np.float64)
+    part = slice(low, low + t.size)
+    plain = _rms([band.level[part] - unfolded(band, view.start, t) for band in view.bands])
+    none = Fold(Estimate(0.0, max(edge_sigma, 1e-3)), misfit=(plain, plain))
+    if plain < PLAIN or view.certified - view.start < 0.6 * view.bar:
+        return none
+    fit = fit_fold(view, t)
+    if fit.misfit**2 < BETTER * plain**2 and fit.length.value > LEAST * view.bar:
+        return Fold(fit.length, fit.turning, fit.ratio, (plain, fit.misfit))
+    if plain < 2.5 * PLAIN or fit.length.value <= LEAST * view.bar:
+        return none
+    raise Unreadable("what stands before the forward code is neither black nor folded picture")
+
+
+def _rms(left: list[Array]) -> float:
+    """Root mean square over bands."""
+    return float(np.sqrt(np.mean(np.concatenate(left) ** 2)))

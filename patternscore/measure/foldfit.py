@@ -1,0 +1,169 @@
+"""Fit of a scan that folds to the bands at an edge of the picture."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from itertools import product
+
+import numpy as np
+import numpy.typing as npt
+
+from patternscore.measure.foldmodel import TURNS, Band, Turn, folded, folded_coarsely
+from patternscore.reading import Estimate
+
+Array = npt.NDArray[np.float64]
+LEAST = 0.2  # bars: shorter folds are not told from the edge of blanking
+RATIOS = (2.0, 2.5, 3.0, 3.6, 4.3, 5.2, 6.2, 7.4, 9.0)
+DURATIONS = (0.05, 0.8, 2.5)  # of the turn, bars
+STARTS = 3  # of the coarse search, that are fitted
+FLOOR = 0.01  # misfit, of the bars' contrast, that even the true scan may leave in a band
+# What is known beforehand of start (bars off nominal), ratio and duration (bars), as mean and standard
+# deviation, the last two of their logarithms: weak, and decisive only where the bars leave it open.
+KNOWN_START, KNOWN_RATIO, KNOWN_TURN = (0.0, 0.15), (np.log(4.8), 0.6), (np.log(0.3), 1.0)
+STEPS = np.array([0.02, 0.02, 0.02, 0.05])
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class View:
+    """An edge of the picture seen inwards: the bands that run up to it.
+
+    ``start`` is where the active line should start, ``bar`` the length of a bar, ``certified`` the coordinate
+    at which the forward code begins; all in coordinates from that edge of the frame.
+    """
+
+    bands: tuple[Band, ...]
+    start: float
+    bar: float
+    certified: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class FoldFit:
+    """Best folded scan: length, turning point, ratio, rms misfit of the bars' contrast."""
+
+    length: Estimate
+    turning: float
+    ratio: float
+    misfit: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Ending:
+    """Where one descent ended: parameters, cost (as chi-squared), rms misfit, covariance from noise."""
+
+    free: Array
+    cost: float
+    misfit: float
+    covariance: Array
+
+
+def fit_fold(view: View, t: Array) -> FoldFit:
+    """Fit folded scans of all kinds of turn; where several explain the strip as well, take their mean.
+
+    Parameters
+    ----------
+    view : View
+        The edge of the picture.
+    t : (n,) float64
+        Coordinates of the strip to explain.
+    """
+    deepest = (t[-1] - view.start) / view.bar / 80.0
+    bands = tuple(band.shallower(max(10.0 * deepest, 0.2)) for band in view.bands)
+    problem = _Problem(View(bands, view.start, view.bar, view.certified), t)
+    starts = problem.search()
+    endings = [problem.descend(start, turn) for start in starts for turn in TURNS]
+    best = min(endings, key=lambda ending: ending.cost)
+    weights = np.exp(-0.5 * np.array([ending.cost - best.cost for ending in endings]))
+    weights /= weights.sum()
+    lengths = np.array([ending.free[0] - ending.free[1] for ending in endings]) * view.bar
+    length = float(weights @ lengths)
+    spread = float(weights @ (lengths - length) ** 2)
+    along = np.array([view.bar, -view.bar, 0.0, 0.0])
+    noise = float(along @ best.covariance @ along)
+    return FoldFit(
+        Estimate(length, float(np.sqrt(noise + spread))),
+        float(weights @ np.array([ending.free[0] for ending in endings])) * view.bar,
+        float(np.exp(best.free[2])),
+        best.misfit,
+    )
+
+
+class _Problem:
+    """Least squares over turning point and start (in bars), and logarithms of ratio and turn (in bars)."""
+
+    def __init__(self, view: View, t: Array) -> None:
+        self.view, self.t = view, t
+        part = slice(int(t[0]), int(t[0]) + t.size)
+        self.target = np.concatenate([band.level[part] for band in view.bands])
+        noise = float(np.mean([band.sigma for band in view.bands]))
+        self.noise, self.unit = noise, float(np.hypot(noise, FLOOR))
+        self.known = np.array([0.0, view.start / view.bar, KNOWN_RATIO[0], KNOWN_TURN[0]])
+        self.pull = np.array([0.0, 1.0 / KNOWN_START[1], 1.0 / KNOWN_RATIO[1], 1.0 / KNOWN_TURN[1]])
+
+    def parameters(self, free: Array) -> Array:
+        """Parameters of the model, kept within what scans do."""
+        bar = self.view.bar
+        ratio = np.exp(np.clip(free[:, 2:3], np.log(1.2), np.log(20.0)))
+        turn = np.exp(np.clip(free[:, 3:4], np.log(0.02), np.log(12.0)))
+        return np.concatenate([free[:, :2] * bar, ratio, turn * bar], axis=1)
+
+    def left(self, free: Array, turn: Turn) -> Array:
+        """Weighted departures for several sets of free parameters, the last four from what is known."""
+        parameters = self.parameters(free)
+        levels = [folded(band, parameters, turn, self.t) for band in self.view.bands]
+        departure = (np.concatenate(levels, axis=1) - self.target) / self.unit
+        return np.concatenate([departure, (free - self.known) * self.pull], axis=1)
+
+    def search(self) -> Array:
+        """Coarse search over turning point, ratio and turn: the best few, as free parameters."""
+        view = self.view
+        first = view.start / view.bar + LEAST
+        turning = np.arange(first, max(view.certified / view.bar + 0.4, first + 0.1), 0.08)
+        free = np.array(list(product(turning, [view.start / view.bar], np.log(RATIOS), np.log(DURATIONS))))
+        cost = np.concatenate(
+            [self._coarse(chunk) for chunk in np.array_split(free, 1 + free.shape[0] // 200)]
+        )
+        chosen: list[int] = []
+        for candidate in np.argsort(cost)[:300]:
+            if all(abs(free[candidate, 0] - free[other, 0]) > 0.3 for other in chosen):
+                chosen.append(int(candidate))
+            if len(chosen) == STARTS:
+                break
+        return free[chosen]
+
+    def _coarse(self, free: Array) -> Array:
+        parameters = self.parameters(free)
+        levels = [folded_coarsely(band, parameters, self.t) for band in self.view.bands]
+        return np.asarray(np.mean((np.concatenate(levels, axis=1) - self.target) ** 2, axis=1))
+
+    def jacobian(self, free: Array, turn: Turn, left: Array) -> Array:
+        """Slopes of the departures by each free parameter, (4, n)."""
+        return np.asarray((self.left(free[None, :] + np.diag(STEPS), turn) - left) / STEPS[:, None])
+
+    def descend(self, start: Array, turn: Turn) -> _Ending:
+        """Levenberg-Marquardt from one start."""
+        free, damping = start.copy(), 1e-2
+        left = self.left(free[None, :], turn)[0]
+        slopes = self.jacobian(free, turn, left)
+        for _ in range(12):
+            normal = slopes @ slopes.T
+            move = -np.linalg.solve(normal + damping * np.diag(np.diag(normal) + 1e-9), slopes @ left)
+            move = np.clip(move, [-0.4, -0.15, -0.4, -0.8], [0.4, 0.15, 0.4, 0.8])
+            fresh = self.left((free + move)[None, :], turn)[0]
+            gain = float(left @ left - fresh @ fresh)
+            if gain <= 0:
+                damping *= 10
+                if damping > 1e3:
+                    break
+                continue
+            free, left, damping = free + move, fresh, max(damping / 5, 1e-6)
+            slopes = self.jacobian(free, turn, left)
+            if gain < 1e-2:
+                break
+        normal = slopes @ slopes.T
+        covariance = np.linalg.inv(normal + 1e-9 * np.eye(4))
+        # The departures are weighted with the floor; noise alone moves the result by less.
+        data = slopes[:, :-4] @ slopes[:, :-4].T * (self.noise / self.unit) ** 2
+        spread = covariance @ data @ covariance
+        misfit = float(np.sqrt(np.mean((left[:-4] * self.unit) ** 2)))
+        return _Ending(free, float(left @ left), misfit, spread)

@@ -1,0 +1,314 @@
+"""Reading a ruler: its band straightened into one line of bars, and the place of every bar edge.
+
+The band is followed along the picture with the located warp and averaged across, so noise and line jitter
+average out. The edges are then fitted together: the bars are a sum of steps of one common shape, so each
+edge is freed from the tails of its neighbours.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import lru_cache
+from typing import Literal
+
+import cv2
+import numpy as np
+import numpy.typing as npt
+
+from patternscore.errors import Unreadable
+from patternscore.frame import Frame
+from patternscore.measure.stepshape import StepShape, StepTrain, fit_shape, spot_width
+from patternscore.plan import Ruler
+from patternscore.warp import Warp
+
+Array = npt.NDArray[np.float64]
+Axis = Literal["h", "v"]
+USED = 0.72  # part of the band's depth that is averaged; the rest is margin for tilt and for the spot
+FEWEST = 4  # rows that a mean needs
+MOST_TURNS = 6
+SETTLED = 0.02  # samples: edges that move less than this need no further turn
+REACH = 5  # samples either side of its expected place within which an edge is sought
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Strip:
+    """A ruler's band, straightened; index n of every array along it is frame coordinate n.
+
+    Attributes
+    ----------
+    axis : {"h", "v"}
+        "h": along the line, in samples; "v": down the frame, in lines.
+    across : float
+        Middle of the band, picture fraction across the ruler's axis.
+    rows : (depth, n) float32
+        The band's rows, IRE.
+    mean : (n,) float64
+        Their mean.
+    scatter : (n,) float64
+        Half the difference of the means of two halves of the rows: what noise does to ``mean``.
+    seen : (n,) bool
+        Where enough rows lie in the frame.
+    expected : (boundaries,) float64
+        Where the warp puts the ruler's boundaries.
+    """
+
+    ruler: Ruler
+    axis: Axis
+    across: float
+    rows: npt.NDArray[np.float32]
+    mean: Array
+    scatter: Array
+    seen: npt.NDArray[np.bool_]
+    expected: Array
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Bars:
+    """Bar edges of one ruler.
+
+    Attributes
+    ----------
+    at : (k,) float64
+        Picture fraction of each edge between unlike bars.
+    sign : (k,) float64
+        +1 where light follows dark.
+    place : (k,) float64
+        Frame coordinate along the ruler.
+    good : (k,) bool
+        Edges read in forward order where the code has them.
+    noise : (k,) float64
+        A draw of the error that noise causes in each ``place``.
+    shape : StepShape
+        The common step, 0 to 1.
+    base, swing : (3,) float64
+        Level of dark bars, and of light bars above dark: polynomials in 2 s / n - 1, lowest power first.
+    """
+
+    strip: Strip
+    at: Array
+    sign: Array
+    place: Array
+    good: npt.NDArray[np.bool_]
+    noise: Array
+    shape: StepShape
+    base: Array
+    swing: Array
+
+    @property
+    def contrast(self) -> float:
+        """Light less dark in the middle, IRE."""
+        return float(self.swing[0])
+
+
+def axis_of(ruler: Ruler) -> Axis:
+    """Which way a ruler runs."""
+    return "h" if ruler.side in ("top", "bottom") else "v"
+
+
+def straighten(frame: Frame, warp: Warp, ruler: Ruler) -> Strip:
+    """Follow a ruler's band through the frame and lay it straight.
+
+    Parameters
+    ----------
+    frame : Frame
+        The frame.
+    warp : Warp
+        Picture fractions to frame coordinates, good to a sample or so.
+    ruler : Ruler
+        The ruler.
+
+    Raises
+    ------
+    Unreadable
+        If the band lies outside the frame.
+    """
+    axis = axis_of(ruler)
+    along, count = (0, frame.samples) if axis == "h" else (1, frame.rows)
+    limit = (frame.rows if axis == "h" else frame.samples) - 1
+    middle = (ruler.band[0] + ruler.band[1]) / 2
+    fractions = np.concatenate([np.linspace(-0.04, 1.04, 28), ruler.boundaries])
+    points = np.full((fractions.size, 2), middle)
+    points[:, along] = fractions
+    found, slopes = warp.to_frame(points), warp.slopes(points)
+    shear = slopes[:, along, 1 - along] / slopes[:, 1 - along, 1 - along]
+    index = np.arange(count, dtype=np.float64)
+    guide = found[:28, along]
+    if np.any(np.diff(guide) <= 0):
+        raise Unreadable(f"the {ruler.side} ruler could not be followed")
+    centre = np.interp(index, guide, found[:28, 1 - along])
+    lean = np.interp(index, guide, shear[:28])
+    depth = abs(ruler.band[1] - ruler.band[0]) * float(np.mean(slopes[:28, 1 - along, 1 - along]))
+    half = max(int(depth * USED / 2), 2)
+    steps = np.arange(-half, half + 1, dtype=np.float64)[:, None]
+    across_map = (centre[None, :] + steps).astype(np.float32)
+    along_map = (index[None, :] + lean[None, :] * steps).astype(np.float32)
+    maps = (along_map, across_map) if axis == "h" else (across_map, along_map)
+    rows = cv2.remap(frame.luma, maps[0], maps[1], cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
+    inside = (across_map >= 0) & (across_map <= limit)
+    mean, scatter, seen = _means(rows, inside)
+    if seen.sum() < 0.5 * count:
+        raise Unreadable(f"the {ruler.side} ruler lies outside the frame")
+    return Strip(ruler, axis, middle, rows, mean, scatter, seen, found[28:, along])
+
+
+def _means(
+    rows: npt.NDArray[np.float32], inside: npt.NDArray[np.bool_]
+) -> tuple[Array, Array, npt.NDArray[np.bool_]]:
+    """Mean of the rows, the scatter of the mean, and where there were rows enough.
+
+    The halves are made of pairs of neighbouring rows, so that both hold as much of either field.
+    """
+    first = (np.arange(rows.shape[0]) // 2 % 2 == 0).astype(np.float32)
+    split = np.stack([first, 1 - first])
+    if inside.all():
+        sums, counts = split @ rows, split.sum(1)[:, None] * np.ones((1, rows.shape[1]), dtype=np.float32)
+    else:
+        sums, counts = split @ (rows * inside), split @ inside.astype(np.float32)
+    total = counts.sum(0)
+    mean = sums.sum(0) / np.maximum(total, 1)
+    each = sums / np.maximum(counts, 1)
+    return mean.astype(np.float64), ((each[0] - each[1]) / 2).astype(np.float64), total >= FEWEST
+
+
+@lru_cache(maxsize=32)
+def transitions(ruler: Ruler) -> tuple[Array, Array]:
+    """Edges between unlike bars: indices of the boundaries, and +1 where light follows."""
+    bits = np.asarray(ruler.bits)
+    index = np.flatnonzero(bits[1:] != bits[:-1]) + 1
+    return index, np.where(bits[index], 1.0, -1.0)
+
+
+def read_bars(strip: Strip) -> Bars:
+    """Find every bar edge of a straightened ruler.
+
+    Parameters
+    ----------
+    strip : Strip
+        The ruler's band.
+
+    Raises
+    ------
+    Unreadable
+        If too few edges stand where the code has them.
+    """
+    index, sign = transitions(strip.ruler)
+    at = np.asarray(strip.ruler.boundaries)[index]
+    count = strip.mean.size
+    expected = strip.expected[index]
+    inside = (expected > 2) & (expected < count - 3)
+    inside &= strip.seen[np.clip(np.rint(expected), 0, count - 1).astype(int)]
+    at, sign, expected = at[inside], sign[inside], expected[inside]
+    if at.size < 12:
+        raise Unreadable(f"too little of the {strip.ruler.side} ruler lies in the frame")
+    base, swing = _levels(strip)
+    u = _u(count)
+    height = np.polynomial.polynomial.polyval(u, swing)
+    flat = (strip.mean - np.polynomial.polynomial.polyval(u, base)) / height
+    place, found = _crossings(flat, expected, sign)
+    place, found = _agree(at, place, found, expected)
+    if found.sum() < 12:
+        raise Unreadable(f"the bars of the {strip.ruler.side} ruler do not stand in their order")
+    return _refine(strip, at, sign, place, found, base, swing)
+
+
+def _u(count: int) -> Array:
+    return np.arange(count) * (2.0 / count) - 1.0
+
+
+def _levels(strip: Strip) -> tuple[Array, Array]:
+    """Levels of dark and light bars along the strip, from the middles of the bars."""
+    middles = (strip.expected[1:] + strip.expected[:-1]) / 2
+    count = strip.mean.size
+    bits = np.asarray(strip.ruler.bits)
+    use = (middles > 1) & (middles < count - 2) & strip.seen[np.clip(middles, 0, count - 1).astype(int)]
+    # The outermost bars may be folded over; levels are taken from the others.
+    use &= (np.arange(bits.size) >= 4) & (np.arange(bits.size) < bits.size - 4)
+    values = np.interp(middles, np.arange(count), strip.mean)
+    u = middles * (2.0 / count) - 1.0
+    if (use & bits).sum() < 6 or (use & ~bits).sum() < 6:
+        raise Unreadable(f"too little of the {strip.ruler.side} ruler lies in the frame")
+    light = _parabola(u[use & bits], values[use & bits])
+    dark = _parabola(u[use & ~bits], values[use & ~bits])
+    swing = light - dark
+    low = np.polynomial.polynomial.polyval(np.linspace(-1, 1, 9), swing).min()
+    noise = float(np.sqrt(np.mean(strip.scatter**2)))
+    if low < max(4.0, 4 * noise):
+        raise Unreadable(f"the bars of the {strip.ruler.side} ruler cannot be told from its ground")
+    return dark, swing
+
+
+def _parabola(u: Array, values: Array) -> Array:
+    """Least-squares parabola, lowest power first, with the curve held back where the reach is short."""
+    design = np.stack([np.ones_like(u), u, u * u], 1)
+    normal = design.T @ design + np.diag([0.0, 0.1, 1.0])
+    return np.asarray(np.linalg.solve(normal, design.T @ values))
+
+
+def _crossings(flat: Array, expected: Array, sign: Array) -> tuple[Array, npt.NDArray[np.bool_]]:
+    """Crossing of half level, of the right sign, nearest to each expected place."""
+    start = np.floor(expected).astype(int) - REACH
+    window = np.clip(start[:, None] + np.arange(2 * REACH + 2)[None, :], 0, flat.size - 1)
+    height = (flat[window] - 0.5) * sign[:, None]
+    crosses = (height[:, :-1] < 0) & (height[:, 1:] >= 0)
+    rise = np.where(crosses, height[:, 1:] - height[:, :-1], 1.0)
+    place = window[:, :-1] - height[:, :-1] / rise
+    far = np.where(crosses, np.abs(place - expected[:, None]), np.inf)
+    best = np.argmin(far, axis=1)
+    each = np.arange(expected.size)
+    found = crosses[each, best]
+    return np.where(found, place[each, best], expected), found
+
+
+def _agree(
+    at: Array, place: Array, found: npt.NDArray[np.bool_], expected: Array
+) -> tuple[Array, npt.NDArray[np.bool_]]:
+    """Keep edges whose departure from the warp runs smoothly along the ruler."""
+    u = 2.0 * at - 1.0
+    design = np.polynomial.polynomial.polyvander(u, 3)
+    off = place - expected
+    good = found.copy()
+    for limit in (3.0, 1.8, 1.2):
+        if good.sum() < 8:
+            return place, good
+        curve = design @ np.linalg.lstsq(design[good], off[good], rcond=None)[0]
+        good = found & (np.abs(off - curve) < limit)
+    return np.where(good, place, expected + curve), good
+
+
+def _refine(
+    strip: Strip,
+    at: Array,
+    sign: Array,
+    place: Array,
+    found: npt.NDArray[np.bool_],
+    base: Array,
+    swing: Array,
+) -> Bars:
+    """Fit step shape, levels and edge places in turn."""
+    good = found
+    u = _u(strip.mean.size)
+    powers = np.stack([np.ones_like(u), u, u * u], 1)
+    width = 0.0
+    for turn in range(MOST_TURNS):
+        run = np.flatnonzero(good)
+        first, last = place[run[0]] - 3.0, place[run[-1]] + 3.0
+        low, high = max(math.ceil(first), 0), min(math.floor(last), strip.mean.size - 1)
+        inner = slice(run[0], run[-1] + 1)
+        scale = (powers @ swing)[low : high + 1]
+        mean = strip.mean[low : high + 1]
+        train = StepTrain(low, high, place[inner], sign[inner])
+        if turn == 0:
+            width = spot_width((mean - (powers @ base)[low : high + 1]) / scale, train)
+        fitted = fit_shape(mean, powers[low : high + 1], scale, train, width)
+        shape, width, base, swing = fitted.shape, fitted.width, fitted.base, fitted.swing
+        scale = (powers @ swing)[low : high + 1]
+        moved, quality = shape.shifts(fitted.left / scale, low, place, sign)
+        place = np.where(good, place + np.clip(moved, -0.7, 0.7), place)
+        good = good & (np.abs(moved) < 1.5) & (quality < 0.25)
+        if good.sum() < 10:
+            raise Unreadable(f"the bars of the {strip.ruler.side} ruler do not stand in their order")
+        if turn > 0 and np.abs(moved[good]).max() < SETTLED:
+            break
+    noise, _ = shape.shifts(strip.scatter[low : high + 1] / scale, low, place, sign)
+    return Bars(strip, at, sign, place, good, noise, shape, base, swing)

@@ -1,0 +1,194 @@
+"""Readings of the scan, from the rulers: fold-back, crush, linearity, size, centring, blanking seen."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from patternscore.errors import Unreadable
+from patternscore.frame import Frame
+from patternscore.located import Located
+from patternscore.measure.fold import Fold, find_fold, view_edge
+from patternscore.measure.ruler import Axis, Bars, axis_of, read_bars, straighten
+from patternscore.measure.scanmap import ScanMap, crush, fit_scan, linearity
+from patternscore.measure.stepshape import StepShape
+from patternscore.plan import Side
+from patternscore.reading import Estimate, Findings
+
+SIDES: dict[Axis, tuple[Side, Side]] = {"h": ("left", "right"), "v": ("top", "bottom")}
+SIZE = {"h": "width", "v": "height"}
+HIDDEN = 1.0 / 80.0  # picture fraction that may lie outside the frame before a reading there is given up
+UNREAD = 0.045  # picture fraction between the edge and the first bar edge read
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Scan:
+    """Scan of one direction with what lies at its ends: the trace for pictures."""
+
+    map: ScanMap
+    bars: tuple[Bars, ...]
+    span: tuple[float, float]
+    nominal: tuple[float, float]
+    folds: dict[str, Fold]
+
+
+def read_scan(
+    frame: Frame, located: Located, kernel: npt.NDArray[np.floating[Any]] | None = None
+) -> Findings:
+    """Read the scan from the rulers of a located chart.
+
+    Parameters
+    ----------
+    frame : Frame
+        The frame.
+    located : Located
+        Where the chart lies in it.
+    kernel : (n,) array, optional
+        Line spread along the line, a value a sample, centred, for the fold-back model. Measured on the
+        rulers themselves where it is not given.
+
+    Returns
+    -------
+    Findings
+        ``fold_*``, ``crush_*``, ``linearity_*``, ``width``, ``height``, ``centre_*``, ``blank_*``; traces
+        ``scan_h`` and ``scan_v`` of type ``Scan``.
+    """
+    findings = Findings()
+    _blanking(findings, frame, located)
+    shape = None if kernel is None else StepShape.from_spread(np.asarray(kernel, dtype=np.float64))
+    axes: tuple[Axis, ...] = ("h", "v")
+    for axis in axes:
+        if any(axis_of(ruler) == axis for ruler in located.plan.rulers):
+            _read_axis(findings, frame, located, axis, shape if axis == "h" else None)
+        else:
+            findings.miss("the pattern has no rulers", *_fold_keys(axis), *_crush_keys(axis))
+    return findings
+
+
+def _fold_keys(axis: Axis) -> list[str]:
+    return [f"fold_{side}" for side in SIDES[axis]]
+
+
+def _crush_keys(axis: Axis) -> list[str]:
+    return [f"crush_{side}" for side in SIDES[axis]]
+
+
+def _blanking(findings: Findings, frame: Frame, located: Located) -> None:
+    """Blanking seen before and after the picture; none where the picture runs to the end of the frame."""
+    half = 0.5
+    seen = {
+        "blank_left": None if located.edges.left is None else located.edges.left + half,
+        "blank_right": None if located.edges.right is None else frame.samples - half - located.edges.right,
+    }
+    for key, samples in seen.items():
+        value = 0.0 if samples is None else max(samples, 0.0)
+        findings.add(key, "us", Estimate(value / frame.sample_rate, 0.03 / frame.sample_rate), "edge")
+
+
+def _read_axis(
+    findings: Findings, frame: Frame, located: Located, axis: Axis, shape: StepShape | None
+) -> None:
+    keys = [*_fold_keys(axis), *_crush_keys(axis), f"linearity_{axis}", SIZE[axis], f"centre_{axis}"]
+    bars, reasons = _all_bars(frame, located, axis)
+    try:
+        if not bars:
+            raise Unreadable(reasons[0])
+        scan = fit_scan(bars)
+    except Unreadable as reason:
+        findings.miss(reason.reason, *keys)
+        return
+    raster = frame.raster
+    nominal = (raster.left, raster.right) if axis == "h" else (raster.top, raster.bottom)
+    shaped = bars if shape is None else [replace(one, shape=shape) for one in bars]
+    folds = _folds(findings, frame, located, axis, shaped, scan, nominal)
+    last = (frame.samples if axis == "h" else frame.rows) - 0.5
+    starts = [max(nominal[0], -0.5), min(nominal[1], last)]
+    for end, side in enumerate(SIDES[axis]):
+        fold = folds.get(side)
+        if fold is not None and fold.turning is not None:
+            starts[end] = fold.turning
+    span = (starts[0], starts[1])
+    findings.traces[f"scan_{axis}"] = Scan(scan, tuple(bars), span, nominal, folds)
+    _speeds(findings, scan, span)
+    _size(findings, scan, nominal)
+
+
+def _all_bars(frame: Frame, located: Located, axis: Axis) -> tuple[list[Bars], list[str]]:
+    bars, reasons = [], []
+    for ruler in located.plan.rulers:
+        if axis_of(ruler) == axis:
+            try:
+                bars.append(read_bars(straighten(frame, located.warp, ruler)))
+            except Unreadable as reason:
+                reasons.append(reason.reason)
+    return bars, reasons
+
+
+def _folds(
+    findings: Findings,
+    frame: Frame,
+    located: Located,
+    axis: Axis,
+    bars: list[Bars],
+    scan: ScanMap,
+    nominal: tuple[float, float],
+) -> dict[str, Fold]:
+    """Read the fold at both ends of the scan."""
+    per_unit = frame.sample_rate if axis == "h" else 1.0
+    folds: dict[str, Fold] = {}
+    for end, side in enumerate(SIDES[axis]):
+        try:
+            fold = find_fold(view_edge(located.plan, bars, side, nominal[end]), scan.edge_sigma)
+        except Unreadable as reason:
+            findings.miss(reason.reason, f"fold_{side}")
+            continue
+        folds[side] = fold
+        length = Estimate(fold.length.value / per_unit, fold.length.sigma / per_unit)
+        findings.add(f"fold_{side}", "us" if axis == "h" else "lines", length, f"{side} edge")
+    return folds
+
+
+def _ends(scan: ScanMap, span: tuple[float, float]) -> tuple[str | None, str | None]:
+    """Why each end of the picture cannot be read; None where it can."""
+    edges = scan.time([0.0, 1.0])
+    width = float(edges[1] - edges[0])
+    hidden = (span[0] - float(edges[0])) / width, (float(edges[1]) - span[1]) / width
+    unread = scan.first, 1.0 - scan.last
+    return _why(hidden[0], unread[0], SIDES[scan.axis][0]), _why(hidden[1], unread[1], SIDES[scan.axis][1])
+
+
+def _why(hidden: float, unread: float, side: str) -> str | None:
+    if hidden > HIDDEN:
+        return f"the {side} edge of the picture lies outside the frame or its active part"
+    if unread > UNREAD:
+        return f"the bars at the {side} edge could not be read"
+    return None
+
+
+def _speeds(findings: Findings, scan: ScanMap, span: tuple[float, float]) -> None:
+    """Crush at both ends, and linearity over the whole."""
+    reasons = _ends(scan, span)
+    for end, side in enumerate(SIDES[scan.axis]):
+        reason = reasons[end]
+        if reason is None:
+            findings.add(f"crush_{side}", "%", crush(scan, end == 0), f"{side} edge")
+        else:
+            findings.miss(reason, f"crush_{side}")
+    reason = reasons[0] or reasons[1]
+    if reason is None:
+        findings.add(f"linearity_{scan.axis}", "%", linearity(scan))
+    else:
+        findings.miss(reason, f"linearity_{scan.axis}")
+
+
+def _size(findings: Findings, scan: ScanMap, nominal: tuple[float, float]) -> None:
+    """Size and centring against the nominal raster, %."""
+    length = nominal[1] - nominal[0]
+    size = scan.linear((0.0, 1.0), (-1.0, 1.0))
+    middle = scan.linear((0.0, 1.0), (0.5, 0.5))
+    off = middle.value - (nominal[0] + nominal[1]) / 2
+    findings.add(SIZE[scan.axis], "%", Estimate(100 * size.value / length, 100 * size.sigma / length))
+    findings.add(f"centre_{scan.axis}", "%", Estimate(100 * off / length, 100 * middle.sigma / length))

@@ -1,0 +1,180 @@
+"""The scan as a function of time: a smooth curve through the bar edges of the rulers of one direction.
+
+Both rulers of a direction see one sweep, but at opposite sides of the picture. The place of a bar edge is
+T(x) plus, with opposite signs on the two sides, a cubic in x for whatever turns, leans or widens the picture
+from one side to the other. T is a cubic spline, and its inverse is the scan position p(t).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+import numpy.typing as npt
+
+from patternscore.errors import Unreadable
+from patternscore.measure.ruler import Axis, Bars
+from patternscore.reading import Estimate
+
+Array = npt.NDArray[np.float64]
+PIECES = {"h": 20, "v": 15}  # spline pieces across the picture
+CELLS = {"h": 16, "v": 12}  # what "local" means for linearity
+SIDE_TERMS = 4
+STIFFNESS = 1e-4  # weight of the spline's third differences, against one bar edge
+MARGIN = 0.08  # picture fraction beyond the edges that the curve may be asked for
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class ScanMap:
+    """Scan of one direction, mean of the two sides of the picture.
+
+    Attributes
+    ----------
+    axis : {"h", "v"}
+        Along the line (frame coordinate in samples) or down the frame (in lines).
+    coefficients : (m,) float64
+        Of the spline, then of the cubic between the sides.
+    covariance : (m, m) float64
+        Of the coefficients, per unit variance of a bar edge.
+    edge_sigma : float
+        Standard deviation of one bar edge, samples or lines.
+    at, place, left : (k,) float64
+        Bar edges used: picture fraction, frame coordinate, and departure from the curve.
+    first, last : float
+        Picture fractions of the first and the last certified bar edge.
+    """
+
+    axis: Axis
+    coefficients: Array
+    covariance: Array
+    edge_sigma: float
+    at: Array
+    place: Array
+    left: Array
+    first: float
+    last: float
+
+    def time(self, x: npt.ArrayLike, side: float = 0.0) -> Array:
+        """Frame coordinate at which the scan reaches picture fractions.
+
+        ``side`` is 0 for the mean of the picture, -1 and +1 for the first and second ruler.
+        """
+        fractions = np.atleast_1d(np.asarray(x, dtype=np.float64))
+        return np.asarray(_design(fractions, np.full(fractions.size, side), self.axis) @ self.coefficients)
+
+    def linear(self, x: npt.ArrayLike, weights: npt.ArrayLike) -> Estimate:
+        """Weighted sum of frame coordinates, with its standard deviation."""
+        fractions = np.asarray(x, dtype=np.float64)
+        row = np.asarray(weights) @ _design(fractions, np.zeros(fractions.size), self.axis)
+        spread = self.edge_sigma * float(np.sqrt(max(row @ self.covariance @ row, 0.0)))
+        return Estimate(float(row @ self.coefficients), spread)
+
+    def speeds(self) -> tuple[Array, Array]:
+        """Scan speed of each cell over the mean, and its standard deviation."""
+        walls = np.linspace(0.0, 1.0, CELLS[self.axis] + 1)
+        design = _design(walls, np.zeros(walls.size), self.axis)
+        across = np.diff(design, axis=0)
+        taken = across @ self.coefficients
+        spread = self.edge_sigma * np.sqrt(np.einsum("ij,jk,ik->i", across, self.covariance, across))
+        speed = 1.0 / taken
+        mean = speed.mean()
+        return speed / mean, spread / taken * speed / mean
+
+
+def _spline(x: Array, pieces: int) -> Array:
+    """Uniform cubic B-splines at fractions; beyond the ends the last cubic runs on: (n, pieces + 3)."""
+    where = x * pieces
+    cell = np.clip(np.floor(where), 0, pieces - 1).astype(np.int64)
+    u = where - cell
+    rest = 1.0 - u
+    weights = np.stack([rest**3, 3 * u**3 - 6 * u**2 + 4, 3 * rest**3 - 6 * rest**2 + 4, u**3], axis=1) / 6.0
+    basis = np.zeros((x.size, pieces + 3))
+    np.put_along_axis(basis, cell[:, None] + np.arange(4)[None, :], weights, axis=1)
+    return basis
+
+
+def _design(x: Array, side: Array, axis: Axis) -> Array:
+    spline = _spline(x, PIECES[axis])
+    powers = np.polynomial.polynomial.polyvander(2.0 * x - 1.0, SIDE_TERMS - 1) * side[:, None]
+    return np.concatenate([spline, powers], axis=1)
+
+
+@lru_cache
+def _penalty(axis: Axis) -> Array:
+    """Third differences of the spline; a faint pull on the cubic, for where only one side is seen."""
+    size = PIECES[axis] + 3
+    rough = np.diff(np.eye(size), 3, axis=0)
+    penalty = np.zeros((size + SIDE_TERMS, size + SIDE_TERMS))
+    penalty[:size, :size] = STIFFNESS * rough.T @ rough
+    return penalty
+
+
+def fit_scan(bars: list[Bars]) -> ScanMap:
+    """Fit the scan through the bar edges of the rulers of one direction.
+
+    Parameters
+    ----------
+    bars : list of Bars
+        One or two rulers of one direction.
+
+    Raises
+    ------
+    Unreadable
+        If fewer edges agree than half the rulers' range needs.
+    """
+    axis = bars[0].strip.axis
+    at = np.concatenate([one.at for one in bars])
+    place = np.concatenate([one.place for one in bars])
+    good = np.concatenate([one.good for one in bars])
+    noise = np.concatenate([one.noise for one in bars])
+    sides = np.concatenate([np.full(one.at.size, np.sign(one.strip.across - 0.5)) for one in bars])
+    design = _design(at, sides if len(bars) > 1 else np.zeros(at.size), axis)
+    penalty = _penalty(axis)
+    if len(bars) == 1:
+        penalty = penalty.copy()
+        penalty[np.diag_indices(penalty.shape[0])] += np.repeat([0.0, 1.0], [PIECES[axis] + 3, SIDE_TERMS])
+    weight = good.astype(np.float64)
+    for _ in range(3):
+        weighted = design * weight[:, None]
+        inverse = np.linalg.inv(design.T @ weighted + penalty)
+        coefficients = inverse @ (weighted.T @ place)
+        left = place - design @ coefficients
+        used = weight > 0
+        limit = max(5.0 * float(np.median(np.abs(left[used]))), 0.25)
+        fresh = good & (np.abs(left) < limit)
+        if np.array_equal(fresh, used):
+            break
+        weight = fresh.astype(np.float64)
+    if fresh.sum() < 10:
+        raise Unreadable("the bars of the rulers do not run in a smooth scan")
+    # An edge's error: what noise does to it, measured between halves of the bands.
+    spread = float(np.sqrt(np.mean((noise[fresh] - np.mean(noise[fresh])) ** 2)))
+    gram = design.T @ (design * weight[:, None])
+    return ScanMap(
+        axis, coefficients, inverse @ gram @ inverse, spread, at[fresh], place[fresh], left[fresh],
+        float(at[fresh].min()), float(at[fresh].max()),
+    )  # fmt: skip
+
+
+def linearity(scan: ScanMap) -> Estimate:
+    """Half the spread of the local scan speed over its mean, %.
+
+    The largest and the smallest of many speeds that noise moves scatter less from grab to grab than two of
+    them picked out beforehand would: where noise decides which they are, half their joint error is left.
+    """
+    speeds, spread = scan.speeds()
+    high, low = int(np.argmax(speeds)), int(np.argmin(speeds))
+    value = 50.0 * float(speeds[high] - speeds[low])
+    joint = 50.0 * float(np.hypot(spread[high], spread[low]))
+    return Estimate(value, joint * (0.5 if value < 4 * joint else 1.0))
+
+
+def crush(scan: ScanMap, start: bool) -> Estimate:
+    """Scan speed lost in the first or the last 5 % of the picture against the middle half, %."""
+    outer = (0.05, 0.0) if start else (1.0, 0.95)
+    edge = scan.linear(outer, (1.0, -1.0))
+    middle = scan.linear((0.75, 0.25), (1.0, -1.0))
+    ratio = 0.05 / edge.value * middle.value / 0.5
+    spread = ratio * float(np.hypot(edge.sigma / edge.value, middle.sigma / middle.value))
+    return Estimate(100.0 * (1.0 - ratio), 100.0 * spread)
