@@ -183,13 +183,31 @@ def _covered(x: float, y: float, reach: float) -> bool:
     return any(x0 - reach < x < x1 + reach and y0 - reach < y < y1 + reach for x0, y0, x1, y1 in _blocks())
 
 
+def _arms(column: int, row: int) -> str:
+    """Which arms of a crossing run clear for a third of a cell; lines end at the outermost crossings."""
+    ways = {"l": (-1, 0), "r": (1, 0), "u": (0, -1), "d": (0, 1)}
+    clear = ""
+    for letter, (dx, dy) in ways.items():
+        ends = not (1 <= column + dx <= COLUMNS - 1 and 1 <= row + dy <= ROWS - 1)
+        if not ends and not any(
+            _covered(column + dx * part, row + dy * part, 0.0) for part in (0.1, 0.2, 0.36)
+        ):
+            clear += letter
+    return clear
+
+
 def _grid() -> Grid:
+    """Crosshatch; a crossing is shown where it has a clear arm both along and across."""
     columns = tuple(_x(k) for k in range(1, COLUMNS))
     rows = tuple(_y(j) for j in range(1, ROWS))
-    shown = tuple(
-        (k - 1, j - 1) for j in range(1, ROWS) for k in range(1, COLUMNS) if not _covered(k, j, 0.0)
-    )
-    return Grid(columns, rows, shown, LIGHT, GROUND, thickness=0.06 / ROWS)
+    shown, arms = [], []
+    for j in range(1, ROWS):
+        for k in range(1, COLUMNS):
+            clear = _arms(k, j)
+            if not _covered(k, j, 0.0) and set(clear) & set("lr") and set(clear) & set("ud"):
+                shown.append((k - 1, j - 1))
+                arms.append(clear)
+    return Grid(columns, rows, tuple(shown), tuple(arms), LIGHT, GROUND, thickness=0.06 / ROWS)
 
 
 def _field() -> tuple[Patch, ...]:

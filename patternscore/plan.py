@@ -65,13 +65,15 @@ class Edge:
 class Grid:
     """The crosshatch: thin lines at the positions ``columns`` (x) and ``rows`` (y).
 
-    ``shown`` lists the crossings (column index, row index) that are clear of other features;
-    ``line`` and ``ground`` are levels in IRE, ``thickness`` is in fractions of the height.
+    ``shown`` lists the crossings (column index, row index) that can be measured, ``arms`` for each of them
+    which of its four arms run clear of other features for a third of a cell, as letters of "lrud" (left,
+    right, up, down). ``line`` and ``ground`` are levels in IRE, ``thickness`` is in fractions of the height.
     """
 
     columns: tuple[float, ...]
     rows: tuple[float, ...]
     shown: tuple[tuple[int, int], ...]
+    arms: tuple[str, ...]
     line: float
     ground: float
     thickness: float

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cache
 from typing import Any
 
 import numpy as np
@@ -13,17 +14,32 @@ from patternscore.standard import Raster
 Array = npt.NDArray[np.float64]
 
 
-def _powers(xy: Array, degree: int) -> tuple[Array, Array, Array]:
-    """Monomials u^i v^j with i + j <= degree, u and v in -1..1 over the picture, and their slopes in x, y."""
-    u, v = 2.0 * xy[:, 0] - 1.0, 2.0 * xy[:, 1] - 1.0
-    terms, dx, dy = [], [], []
-    for total in range(degree + 1):
-        for j in range(total + 1):
-            i = total - j
-            terms.append(u**i * v**j)
-            dx.append(2.0 * i * u ** max(i - 1, 0) * v**j)
-            dy.append(2.0 * j * u**i * v ** max(j - 1, 0))
-    return np.stack(terms, 1), np.stack(dx, 1), np.stack(dy, 1)
+@cache
+def _exponents(degree: int) -> tuple[npt.NDArray[np.int64], npt.NDArray[np.int64]]:
+    """Exponents i, j of the monomials u^i v^j with i + j <= degree, lowest degrees first."""
+    pairs = [(total - j, j) for total in range(degree + 1) for j in range(total + 1)]
+    i, j = np.array(pairs, dtype=np.int64).T
+    return i, j
+
+
+def _tables(xy: Array, degree: int) -> tuple[Array, Array]:
+    """Powers 0 to ``degree`` of u and of v, both -1 to 1 over the picture."""
+    uv = 2.0 * xy - 1.0
+    powers = np.ones((len(xy), 2, degree + 1))
+    np.cumprod(np.broadcast_to(uv[:, :, None], (len(xy), 2, degree)), axis=2, out=powers[:, :, 1:])
+    return powers[:, 0], powers[:, 1]
+
+
+def _monomials(xy: Array, degree: int) -> Array:
+    """Monomials at picture points, (n, terms)."""
+    (i, j), (u, v) = _exponents(degree), _tables(xy, degree)
+    return np.asarray(u[:, i] * v[:, j])
+
+
+def _monomial_slopes(xy: Array, degree: int) -> tuple[Array, Array]:
+    """Derivatives of the monomials by x and by y, (n, terms) each."""
+    (i, j), (u, v) = _exponents(degree), _tables(xy, degree)
+    return 2.0 * i * u[:, np.maximum(i - 1, 0)] * v[:, j], 2.0 * j * u[:, i] * v[:, np.maximum(j - 1, 0)]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -33,7 +49,7 @@ class Warp:
     Attributes
     ----------
     coefficients : (terms, 2) float64
-        One column each for the sample and the line coordinate, terms in the order of ``_powers``.
+        One column each for the sample and the line coordinate, terms in the order of ``_exponents``.
     degree : int
         Largest sum of the exponents.
     """
@@ -55,12 +71,12 @@ class Warp:
             Sample and line coordinate; the centre of the first sample (line) is 0.0.
         """
         points = np.atleast_2d(np.asarray(xy, dtype=np.float64))
-        return np.asarray(_powers(points, self.degree)[0] @ self.coefficients)
+        return np.asarray(_monomials(points, self.degree) @ self.coefficients)
 
     def slopes(self, xy: npt.ArrayLike) -> Array:
         """Jacobian at picture points: (n, 2, 2), [k, a, b] = d frame coordinate a / d picture coordinate b."""
         points = np.atleast_2d(np.asarray(xy, dtype=np.float64))
-        _, dx, dy = _powers(points, self.degree)
+        dx, dy = _monomial_slopes(points, self.degree)
         return np.stack([dx @ self.coefficients, dy @ self.coefficients], axis=2)
 
 
@@ -80,7 +96,7 @@ def fit_warp(
     weights : (n,) array, optional
         Square root of the inverse variance of each point.
     """
-    design = _powers(np.asarray(xy, dtype=np.float64), degree)[0]
+    design = _monomials(np.asarray(xy, dtype=np.float64), degree)
     target = np.asarray(found, dtype=np.float64)
     if weights is not None:
         design, target = design * weights[:, None], target * weights[:, None]

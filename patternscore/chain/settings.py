@@ -67,7 +67,7 @@ class Chain:
     bow_h: float = 0.0
     bow_v: float = 0.0
     spot_us: float = 0.0
-    spot_lines: float = 0.0
+    spot_lines: float = 0.4
     response: tuple[Response, ...] = ()
     gamma: float = 1.0
     gain: float = 1.0

@@ -1,0 +1,175 @@
+"""Measures crosshatch crossings to a fraction of a sample, from a warp that is good to a third of a cell."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from patternscore.located import Crossings
+from patternscore.plan import Grid
+from patternscore.warp import Warp
+
+Array = npt.NDArray[Any]
+_FINE = 4  # points of the common line profile per sample
+
+
+@dataclass(frozen=True, slots=True)
+class _Lines:
+    """Profiles across the grid lines of one direction, one for each crossing.
+
+    ``profiles`` is (n, 2 * reach + 1), offsets from the predicted place in samples or lines.
+    """
+
+    profiles: Array
+    offsets: Array
+
+
+def predicted(grid: Grid) -> tuple[Array, Array]:
+    """Index (n, 2) and picture fractions (n, 2) of the crossings that the plan shows."""
+    index = np.array(grid.shown, dtype=np.int64).reshape(-1, 2)
+    return index, np.stack([np.array(grid.columns)[index[:, 0]], np.array(grid.rows)[index[:, 1]]], 1)
+
+
+def _inside(points: Array, shape: tuple[int, int], margin: float) -> Array:
+    rows, samples = shape
+    x, y = points.T
+    return np.asarray((x > margin) & (x < samples - 1 - margin) & (y > margin) & (y < rows - 1 - margin))
+
+
+def _profiles(
+    luma: Array, points: Array, slopes: Array, arms: Array, axis: int, reach: int, span: tuple[int, int]
+) -> _Lines:
+    """Average along the clear arms of each crossing; axis 0 cuts upright lines."""
+    import cv2
+
+    offsets = np.arange(-reach, reach + 1, dtype=np.float64)
+    along = np.arange(span[0], span[1] + 1, dtype=np.float64)
+    along = np.concatenate([-along[::-1], along])
+    # How far the line leans: movement across it for one step along it.
+    lean = slopes[:, axis, 1 - axis] / slopes[:, 1 - axis, 1 - axis]
+    across = points[:, axis, None, None] + offsets[None, None] + lean[:, None, None] * along[None, :, None]
+    run = np.broadcast_to(points[:, 1 - axis, None, None] + along[None, :, None], across.shape)
+    x, y = (across, run) if axis == 0 else (run, across)
+    shape = (len(points) * len(along), len(offsets))
+    levels = cv2.remap(
+        luma,
+        x.reshape(shape).astype(np.float32),
+        y.reshape(shape).astype(np.float32),
+        cv2.INTER_CUBIC,
+        borderMode=cv2.BORDER_REPLICATE,
+    )
+    sides = levels.reshape(len(points), 2, len(along) // 2, len(offsets)).mean(2)
+    weight = arms / arms.sum(1, keepdims=True)
+    return _Lines((sides * weight[:, :, None]).sum(1), offsets)
+
+
+def _clear_arms(grid: Grid) -> Array:
+    """(n, 2, 2) for each crossing: [0] arms up, down of the upright line, [1] arms left, right of the other."""
+    return np.array([[[way in arms for way in pair] for pair in ("ud", "lr")] for arms in grid.arms], float)
+
+
+def _coarse(lines: _Lines, half_width: float) -> Array:
+    """Shift of each line by its ridge response, to the nearest sample or better."""
+    narrow = np.exp(-0.5 * (np.arange(-8, 9) / max(half_width, 1.0)) ** 2)
+    ridge = narrow - narrow.mean()
+    import cv2
+
+    centred = (lines.profiles - lines.profiles.mean(1, keepdims=True)).astype(np.float32)
+    response = cv2.filter2D(centred, -1, ridge[None].astype(np.float32), borderType=cv2.BORDER_CONSTANT)
+    response = response[:, 3:-3] - 0.002 * np.ptp(response) * np.abs(lines.offsets[3:-3])
+    top = np.clip(response.argmax(1), 1, response.shape[1] - 2)
+    at = np.arange(len(top))
+    before, middle, after = response[at, top - 1], response[at, top], response[at, top + 1]
+    bend = np.minimum(before - 2 * middle + after, -1e-6)
+    return np.asarray(lines.offsets[3:-3][top] + np.clip(0.5 * (before - after) / bend, -1, 1))
+
+
+def _shape(lines: _Lines, shifts: Array) -> tuple[Array, Array]:
+    """Common profile of all lines against distance from their centres."""
+    heights = lines.profiles - np.median(lines.profiles, axis=1, keepdims=True)
+    distance = lines.offsets[None] - shifts[:, None]
+    reach = lines.offsets[-1]
+    bins = np.rint((distance + 2 * reach) * _FINE).astype(int).ravel()
+    size = int(4 * reach * _FINE) + 2
+    bins = np.clip(bins, 0, size - 1)
+    count = np.bincount(bins, minlength=size)
+    total = np.bincount(bins, heights.ravel(), minlength=size)
+    places = np.arange(size) / _FINE - 2 * reach
+    good = count > 0.1 * len(shifts) / _FINE
+    shape = np.interp(places, places[good], total[good] / count[good])
+    # A line's place is the centroid of its upper part: without that the common profile could drift.
+    weight = np.clip(shape - 0.3 * shape.max(), 0.0, None) * (np.abs(places) < reach)
+    places = places - (weight * places).sum() / max(float(weight.sum()), 1e-9)
+    return places, np.convolve(np.pad(shape, 2, mode="edge"), [0.1, 0.2, 0.4, 0.2, 0.1], "valid")
+
+
+def _refine(lines: _Lines, shifts: Array, rounds: int = 3) -> tuple[Array, Array, Array]:
+    """Least-squares shift of each line against the common profile.
+
+    Returns
+    -------
+    shifts, sigma, height : (n,) arrays
+        Height is the line's contrast relative to the common profile.
+    """
+    sigma = height = np.ones(len(shifts))
+    for _ in range(rounds):
+        places, shape = _shape(lines, shifts)
+        slope = np.gradient(shape, places)
+        distance = lines.offsets[None] - shifts[:, None]
+        level = np.interp(distance, places, shape)
+        rate = np.interp(distance, places, slope)
+        ramp = np.broadcast_to(lines.offsets / lines.offsets[-1], level.shape)
+        design = np.stack([np.ones_like(level), ramp, level, rate], 2)
+        normal = np.swapaxes(design, 1, 2) @ design
+        normal += 1e-6 * np.trace(normal, axis1=1, axis2=2)[:, None, None] * np.eye(4)
+        right = np.swapaxes(design, 1, 2) @ lines.profiles[:, :, None]
+        inverse = np.linalg.inv(normal)
+        solved = (inverse @ right)[:, :, 0]
+        left = lines.profiles - (design @ solved[:, :, None])[:, :, 0]
+        noise = np.sqrt(np.mean(left**2, axis=1) * left.shape[1] / max(left.shape[1] - 4, 1))
+        height = solved[:, 2]
+        safe = np.maximum(height, 0.1)
+        step = -solved[:, 3] / safe
+        sigma = np.sqrt(inverse[:, 3, 3]) * np.maximum(noise, 0.2 * np.median(noise)) / safe
+        shifts = shifts + np.clip(step, -2.0, 2.0)
+    return shifts, sigma, height
+
+
+def measure_crossings(
+    luma: Array, grid: Grid, warp: Warp, cell: tuple[float, float], wide: bool
+) -> Crossings:
+    """Crossings that are there, near where the warp puts them.
+
+    Parameters
+    ----------
+    luma : (rows, samples) float32, IRE
+    cell : (float, float)
+        Size of a cell in samples and lines.
+    wide : bool
+        Search over a third of a cell; else over a sixth, which keeps other features out.
+    """
+    index, xy = predicted(grid)
+    points = warp.to_frame(xy)
+    reach = [max(int(size * (0.34 if wide else 0.16)), 5) for size in cell]
+    clear = (int(np.ceil(0.1 * min(cell))), int(0.33 * min(cell)))
+    here = _inside(points, (luma.shape[0], luma.shape[1]), clear[1] + 2.0)
+    index, xy, points, arms = index[here], xy[here], points[here], _clear_arms(grid)[here]
+    if len(points) < 4:
+        return Crossings(index, xy, points, np.ones_like(points))
+    slopes = warp.slopes(xy)
+    shifts, sigma, good = np.zeros_like(points), np.ones_like(points), np.ones(len(points), dtype=bool)
+    for axis in (0, 1):
+        lines = _profiles(luma, points, slopes, arms[:, axis], axis, reach[axis], clear)
+        start = _coarse(lines, 0.05 * cell[axis]) if wide else np.zeros(len(points))
+        shifts[:, axis], sigma[:, axis], height = _refine(lines, start)
+        good &= (height > 0.4 * np.median(height)) & (np.abs(shifts[:, axis]) < reach[axis] - 2)
+    # The two lines lean a little: go from the predicted crossing along both to where they meet.
+    lean_x = slopes[:, 0, 1] / slopes[:, 1, 1]
+    lean_y = slopes[:, 1, 0] / slopes[:, 0, 0]
+    moved_x = (shifts[:, 0] + lean_x * shifts[:, 1]) / (1 - lean_x * lean_y)
+    moved_y = (shifts[:, 1] + lean_y * shifts[:, 0]) / (1 - lean_x * lean_y)
+    found = points + np.stack([moved_x, moved_y], 1)
+    return Crossings(index[good], xy[good], found[good], sigma[good])
