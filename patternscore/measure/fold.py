@@ -7,14 +7,14 @@ is believed only if it explains the strip far better than a scan that does not f
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
 
 from patternscore.errors import Unreadable
-from patternscore.measure.foldfit import LEAST, View, fit_fold
-from patternscore.measure.foldmodel import Band, unfolded
+from patternscore.measure.foldfit import LATER, LEAST, View, fit_fold
+from patternscore.measure.foldmodel import Band, unfolded_misfit
 from patternscore.measure.ruler import Bars
 from patternscore.measure.stepshape import StepShape
 from patternscore.plan import Plan, Ruler, Side
@@ -74,7 +74,7 @@ def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float) -> View:
             bands.append(found[0])
             certified.append(found[1])
             length = abs(float(found[0].slope(0.0))) / _bars_across(one.strip.ruler)
-    if not bands:
+    if not any(band.walls[1] < 0.05 for band in bands):
         raise Unreadable(f"no ruler is seen near the {side} edge")
     return View(tuple(bands), count - 1 - start if far else start, length, min(certified))
 
@@ -93,36 +93,50 @@ def _band(plan: Plan, bars: Bars, side: Side, far: bool) -> tuple[Band, float] |
     at = 1.0 - bars.at[::-1] if far else bars.at
     place = count - 1 - bars.place[::-1] if far else bars.place
     good = bars.good[::-1] if far else bars.good
+    doubt = bars.doubt[::-1] if far else bars.doubt
     near = np.flatnonzero(at < 0.5)
     wrong = np.flatnonzero(~good[near])
-    first = int(wrong[-1]) + 1 if wrong.size else 0
-    use = near[first:]
-    if use.size < 6 or at[use[0]] > 0.16:
+    use = near[int(wrong[-1]) + 1 if wrong.size else 0 :]
+    if use.size < 8 or at[use[0]] > 0.16:
         return None
-    forward = _forward(at[use], place[use], _bars_across(strip.ruler))
+    bar = 1.0 / _bars_across(strip.ruler)
+    forward, first = _forward(at[use], place[use], doubt[use], bar)
+    use = use[first:]
     u = np.arange(count) * (2.0 / count) - 1.0
     polyval = np.polynomial.polynomial.polyval
     swing = polyval(u, bars.swing)
-    level = (strip.mean - polyval(u, bars.base)) / swing
+    odd = np.arange(count) % 2
+    level = (strip.mean - polyval(u, bars.base) - bars.lift * odd) / swing
+    t = np.arange(count) + bars.lag * odd
     walls, content = _content(plan, strip.ruler, side, far)
     black = -float(bars.base[0]) / float(bars.swing[0])
     shape = bars.shape
     if far:
-        level, shape = level[::-1], StepShape(1.0 - shape.table[::-1], shape.width)
+        t, level, shape = (count - 1 - t)[::-1], level[::-1], StepShape(1.0 - shape.table[::-1], shape.width)
     noise = float(np.sqrt(np.mean(strip.scatter**2))) / bars.contrast
     content = np.concatenate([[black], content])
-    return Band(level, walls, content, shape, forward, noise), float(place[use[0]])
+    reader = Band(t, level, walls, content, shape, forward, walls, noise)
+    met = reader.reach(walls)
+    nearest = use[np.argmin(np.abs(at[use][None, :] - walls[:, None]), axis=1)]
+    met = np.where(np.abs(at[nearest] - walls) < 1e-6, place[nearest], met)
+    return replace(reader, met=met), float(place[use[0]])
 
 
-def _forward(at: Array, place: Array, bars: float) -> Array:
-    """Forward scan near the edge: a parabola through certified bar edges clear of the turn."""
-    clear = at >= at[0] + 1.5 / bars
-    clear &= at <= at[0] + 0.4
-    x = at[clear]
-    design = np.stack([np.ones_like(x), x, x * x], 1)
+def _forward(at: Array, place: Array, doubt: Array, bar: float) -> tuple[Array, int]:
+    """Forward scan near the edge, and the index of the first edge that keeps to it.
+
+    The scan is a parabola through bar edges clear of a turn. Edges nearer to the picture's edge may be there
+    by chance, where folded bars look like the code; they count if they lie on the curve.
+    """
+    clear = (at >= at[0] + 3.4 * bar) & (at <= at[0] + 0.28)
+    powers = np.polynomial.polynomial.polyvander(at, 2)
+    weighted = powers[clear] / (doubt[clear, None] + 0.02) ** 2
     # The curve is held back a little: an edge or two must not bend it.
-    normal = design.T @ design + np.diag([0.0, 0.0, 1e-6])
-    return np.asarray(np.linalg.solve(normal, design.T @ place[clear]))
+    normal = weighted.T @ powers[clear] + np.diag([0.0, 0.0, 1e-4])
+    forward = np.linalg.solve(normal, weighted.T @ place[clear])
+    off = np.abs(place - powers @ forward) > 0.04 * bar * forward[1] + 2.0 * doubt
+    astray = np.flatnonzero(off & (at < at[0] + 3.4 * bar))
+    return np.asarray(forward), int(astray[-1]) + 1 if astray.size else 0
 
 
 def _content(plan: Plan, ruler: Ruler, side: Side, far: bool) -> tuple[Array, Array]:
@@ -173,13 +187,15 @@ def find_fold(view: View, edge_sigma: float) -> Fold:
         If something stands before the forward code that no fold explains.
     """
     low = max(0, int(np.ceil(view.start - 0.8 * view.bar)))
-    t = np.arange(low, int(view.certified + 3.0 * view.bar) + 1, dtype=np.float64)
-    part = slice(low, low + t.size)
-    plain = _rms([band.level[part] - unfolded(band, view.start, t) for band in view.bands])
+    high = int(view.certified + (LATER + 2.0) * view.bar) + 1
+    view = replace(view, bands=tuple(band.between(low, high) for band in view.bands))
+    before = [band.t < view.certified for band in view.bands]
+    left = [unfolded_misfit(band, view.start)[part] for band, part in zip(view.bands, before, strict=True)]
+    plain = _rms(left)
     none = Fold(Estimate(0.0, max(edge_sigma, 1e-3)), misfit=(plain, plain))
-    if plain < PLAIN or view.certified - view.start < 0.6 * view.bar:
+    if plain < PLAIN:
         return none
-    fit = fit_fold(view, t)
+    fit = fit_fold(view)
     if fit.misfit**2 < BETTER * plain**2 and fit.length.value > LEAST * view.bar:
         return Fold(fit.length, fit.turning, fit.ratio, (plain, fit.misfit))
     if plain < 2.5 * PLAIN or fit.length.value <= LEAST * view.bar:

@@ -13,13 +13,14 @@ from patternscore.reading import Estimate
 
 Array = npt.NDArray[np.float64]
 LEAST = 0.2  # bars: shorter folds are not told from the edge of blanking
-RATIOS = (2.0, 2.5, 3.0, 3.6, 4.3, 5.2, 6.2, 7.4, 9.0)
-DURATIONS = (0.05, 0.8, 2.5)  # of the turn, bars
+RATIOS = (2.0, 2.4, 2.8, 3.2, 3.7, 4.3, 5.0, 5.8, 6.7, 7.8, 9.0)
+DURATIONS = (0.05, 1.0, 4.0)  # of the turn, bars
+LATER = 3.3  # bars beyond the first certified edge, which may be a chance one, that the turn is sought
 STARTS = 3  # of the coarse search, that are fitted
 FLOOR = 0.01  # misfit, of the bars' contrast, that even the true scan may leave in a band
 # What is known beforehand of start (bars off nominal), ratio and duration (bars), as mean and standard
 # deviation, the last two of their logarithms: weak, and decisive only where the bars leave it open.
-KNOWN_START, KNOWN_RATIO, KNOWN_TURN = (0.0, 0.15), (np.log(4.8), 0.6), (np.log(0.3), 1.0)
+KNOWN_START, KNOWN_RATIO, KNOWN_TURN = (0.0, 0.15), (np.log(4.8), 0.6), (np.log(0.25), 1.0)
 STEPS = np.array([0.02, 0.02, 0.02, 0.05])
 
 
@@ -57,19 +58,17 @@ class _Ending:
     covariance: Array
 
 
-def fit_fold(view: View, t: Array) -> FoldFit:
+def fit_fold(view: View) -> FoldFit:
     """Fit folded scans of all kinds of turn; where several explain the strip as well, take their mean.
 
     Parameters
     ----------
     view : View
-        The edge of the picture.
-    t : (n,) float64
-        Coordinates of the strip to explain.
+        The edge of the picture, its bands cut to the strip to explain.
     """
-    deepest = (t[-1] - view.start) / view.bar / 80.0
+    deepest = (view.bands[0].t[-1] - view.start) / float(view.bands[0].slope(0.0))
     bands = tuple(band.shallower(max(10.0 * deepest, 0.2)) for band in view.bands)
-    problem = _Problem(View(bands, view.start, view.bar, view.certified), t)
+    problem = _Problem(View(bands, view.start, view.bar, view.certified))
     starts = problem.search()
     endings = [problem.descend(start, turn) for start in starts for turn in TURNS]
     best = min(endings, key=lambda ending: ending.cost)
@@ -91,10 +90,9 @@ def fit_fold(view: View, t: Array) -> FoldFit:
 class _Problem:
     """Least squares over turning point and start (in bars), and logarithms of ratio and turn (in bars)."""
 
-    def __init__(self, view: View, t: Array) -> None:
-        self.view, self.t = view, t
-        part = slice(int(t[0]), int(t[0]) + t.size)
-        self.target = np.concatenate([band.level[part] for band in view.bands])
+    def __init__(self, view: View) -> None:
+        self.view = view
+        self.target = np.concatenate([band.level for band in view.bands])
         noise = float(np.mean([band.sigma for band in view.bands]))
         self.noise, self.unit = noise, float(np.hypot(noise, FLOOR))
         self.known = np.array([0.0, view.start / view.bar, KNOWN_RATIO[0], KNOWN_TURN[0]])
@@ -110,7 +108,7 @@ class _Problem:
     def left(self, free: Array, turn: Turn) -> Array:
         """Weighted departures for several sets of free parameters, the last four from what is known."""
         parameters = self.parameters(free)
-        levels = [folded(band, parameters, turn, self.t) for band in self.view.bands]
+        levels = [folded(band, parameters, turn) for band in self.view.bands]
         departure = (np.concatenate(levels, axis=1) - self.target) / self.unit
         return np.concatenate([departure, (free - self.known) * self.pull], axis=1)
 
@@ -118,7 +116,7 @@ class _Problem:
         """Coarse search over turning point, ratio and turn: the best few, as free parameters."""
         view = self.view
         first = view.start / view.bar + LEAST
-        turning = np.arange(first, max(view.certified / view.bar + 0.4, first + 0.1), 0.08)
+        turning = np.arange(first, view.certified / view.bar + LATER, 0.11)
         free = np.array(list(product(turning, [view.start / view.bar], np.log(RATIOS), np.log(DURATIONS))))
         cost = np.concatenate(
             [self._coarse(chunk) for chunk in np.array_split(free, 1 + free.shape[0] // 200)]
@@ -133,7 +131,7 @@ class _Problem:
 
     def _coarse(self, free: Array) -> Array:
         parameters = self.parameters(free)
-        levels = [folded_coarsely(band, parameters, self.t) for band in self.view.bands]
+        levels = [folded_coarsely(band, parameters) for band in self.view.bands]
         return np.asarray(np.mean((np.concatenate(levels, axis=1) - self.target) ** 2, axis=1))
 
     def jacobian(self, free: Array, turn: Turn, left: Array) -> Array:

@@ -12,7 +12,7 @@ or an exponential approach. A short turn of any kind is a sharp fold.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from typing import Literal
 
@@ -24,6 +24,7 @@ from patternscore.measure.stepshape import StepShape
 Array = npt.NDArray[np.float64]
 Turn = Literal["ramp", "sine", "soft"]
 TURNS: tuple[Turn, ...] = ("ramp", "sine", "soft")
+LIGHTEST = 0.05  # of the bars' contrast above dark bars: black that is taken for black
 CELLS = 2000  # of the picture, in which a coarse look tells content apart
 _ROOTS = np.linspace(0.0, 16.0, 1601)
 
@@ -34,6 +35,8 @@ class Band:
 
     Attributes
     ----------
+    t : (n,) float64
+        Coordinates at which the samples were taken, rising by one from sample to sample or nearly so.
     level : (n,) float64
         Levels, 0 for dark bars and 1 for light ones.
     walls : (m,) float64
@@ -44,15 +47,19 @@ class Band:
         Common step of the band, seen from the edge.
     forward : (3,) float64
         Coordinate at which the forward scan reaches x, as a parabola: lowest power first.
+    met : (m,) float64
+        Coordinate at which the forward scan meets each wall: as read, or from the parabola.
     sigma : float
         Standard deviation of ``level`` from noise.
     """
 
+    t: Array
     level: Array
     walls: Array
     content: Array
     shape: StepShape
     forward: Array
+    met: Array
     sigma: float
 
     def reach(self, x: npt.ArrayLike) -> Array:
@@ -73,16 +80,30 @@ class Band:
     def shallower(self, depth: float) -> Band:
         """Return the band without the walls beyond a depth."""
         keep = int(np.searchsorted(self.walls, depth)) + 1
-        return Band(
-            self.level, self.walls[:keep], self.content[: keep + 1], self.shape, self.forward, self.sigma
-        )
+        return replace(self, walls=self.walls[:keep], content=self.content[: keep + 1], met=self.met[:keep])
+
+    def between(self, low: int, high: int) -> Band:
+        """Return the band with the samples from ``low`` up to but not including ``high`` only."""
+        return replace(self, t=self.t[low:high], level=self.level[low:high])
 
 
-def unfolded(band: Band, start: float, t: Array) -> Array:
-    """Levels without a fold: black until ``start``, then what the forward scan meets."""
-    places = np.maximum(band.reach(band.walls), start)
-    steps = np.diff(band.content)
-    return np.asarray(band.content[0] + steps @ band.shape.at(t[None, :] - places[:, None]))
+def unfolded_misfit(band: Band, start: float) -> Array:
+    """Departures, (n,), of a band from the scan that does not fold and comes nearest to it.
+
+    That scan is black up to where the picture begins, at ``start`` or later, as it is shifted or crushed;
+    then it meets the walls where they were read.
+    """
+    t, first = band.t, band.met[1]
+    begins = np.arange(start, max(first - 1.0, start + 0.2), 0.25)[:, None]
+    walls = np.maximum(band.met[1:], start)
+    beyond = np.diff(band.content)[1:] @ band.shape.at(t[None, :] - walls[:, None])
+    shown = band.shape.at(t[None, :] - begins)
+    rest = band.level - beyond - shown * band.content[1]
+    dark = 1.0 - shown
+    # Black is what it is found to be, but never lighter than the dark bars.
+    black = np.sum(dark * rest, axis=1) / np.maximum(np.sum(dark * dark, axis=1), 1e-3)
+    left = rest - dark * np.minimum(black, LIGHTEST)[:, None]
+    return np.asarray(left[np.argmin(np.sum(left * left, axis=1))])
 
 
 @lru_cache
@@ -138,7 +159,7 @@ def folding(band: Band, parameters: Array) -> Folding:
     return Folding(turning, joined, joined - 0.5 * speed * rise, speed, ratio, 1.0 / rise)
 
 
-def folded(band: Band, parameters: Array, turn: Turn, t: Array) -> Array:
+def folded(band: Band, parameters: Array, turn: Turn) -> Array:
     """Levels with a fold, for several sets of parameters at once.
 
     Parameters
@@ -149,8 +170,6 @@ def folded(band: Band, parameters: Array, turn: Turn, t: Array) -> Array:
         As for ``folding``.
     turn : str
         Kind of the turn.
-    t : (n,) float64
-        Coordinates to give levels for.
 
     Returns
     -------
@@ -163,22 +182,24 @@ def folded(band: Band, parameters: Array, turn: Turn, t: Array) -> Array:
     height = np.maximum(height, 0.0)
     curved = np.sqrt(2.0 * height / (scan.speed * scan.rate))
     beyond = band.walls[None, :] > scan.joined
-    later = np.where(beyond, band.reach(band.walls)[None, :], scan.turning + curved)
+    forward = np.where(band.met[None, :] > scan.turning + 1.0 / scan.rate, band.met, band.reach(band.walls))
+    later = np.where(beyond, forward, scan.turning + curved)
     settle = scan.ratio / scan.rate
     earlier = scan.turning - settle * _time_of_way(turn, height / (scan.speed * scan.ratio * settle))
     steps = np.diff(band.content)[None, :] * met
     places = np.concatenate([start, np.maximum(earlier, start), later], axis=1)
     inner = np.full(start.shape, band.content[-1] - band.content[0])
     sizes = np.concatenate([inner, -steps, steps], axis=1)
-    values = band.shape.at(t[None, None, :] - places[:, :, None])
+    values = band.shape.at(band.t[None, None, :] - places[:, :, None])
     return np.asarray(band.content[0] + np.einsum("ck,ckn->cn", sizes, values))
 
 
-def folded_coarsely(band: Band, parameters: Array, t: Array, per: int = 4) -> npt.NDArray[np.float32]:
+def folded_coarsely(band: Band, parameters: Array, per: int = 4) -> npt.NDArray[np.float32]:
     """As ``folded`` with a ramp, from content looked up ``per`` times a sample: quick, for a search.
 
     All parameters must share one start of the active line.
     """
+    t = band.t
     fine = (np.arange(t.size * per) - (per - 1) / 2) / per + t[0]
     scan = folding(band, parameters)
     since = fine[None, :] - scan.turning

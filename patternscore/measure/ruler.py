@@ -79,10 +79,14 @@ class Bars:
         Edges read in forward order where the code has them.
     noise : (k,) float64
         A draw of the error that noise causes in each ``place``.
+    doubt : (k,) float64
+        How far each ``place`` is left open even without noise.
     shape : StepShape
         The common step, 0 to 1.
     base, swing : (3,) float64
         Level of dark bars, and of light bars above dark: polynomials in 2 s / n - 1, lowest power first.
+    lag, lift : float
+        By how much odd lines lie lower in the picture than their number says, lines, and lighter, IRE.
     """
 
     strip: Strip
@@ -91,9 +95,12 @@ class Bars:
     place: Array
     good: npt.NDArray[np.bool_]
     noise: Array
+    doubt: Array
     shape: StepShape
     base: Array
     swing: Array
+    lag: float
+    lift: float
 
     @property
     def contrast(self) -> float:
@@ -289,26 +296,31 @@ def _refine(
     good = found
     u = _u(strip.mean.size)
     powers = np.stack([np.ones_like(u), u, u * u], 1)
-    width = 0.0
+    fields = strip.axis == "v"
+    width = lag = 0.0
     for turn in range(MOST_TURNS):
         run = np.flatnonzero(good)
         first, last = place[run[0]] - 3.0, place[run[-1]] + 3.0
         low, high = max(math.ceil(first), 0), min(math.floor(last), strip.mean.size - 1)
-        inner = slice(run[0], run[-1] + 1)
-        scale = (powers @ swing)[low : high + 1]
-        mean = strip.mean[low : high + 1]
-        train = StepTrain(low, high, place[inner], sign[inner])
+        part, inner = slice(low, high + 1), slice(run[0], run[-1] + 1)
+        scale = (powers @ swing)[part]
+        mean = strip.mean[part]
+        train = StepTrain(low, high, place[inner], sign[inner], lag)
         if turn == 0:
-            width = spot_width((mean - (powers @ base)[low : high + 1]) / scale, train)
-        fitted = fit_shape(mean, powers[low : high + 1], scale, train, width)
-        shape, width, base, swing = fitted.shape, fitted.width, fitted.base, fitted.swing
-        scale = (powers @ swing)[low : high + 1]
-        moved, quality = shape.shifts(fitted.left / scale, low, place, sign)
-        place = np.where(good, place + np.clip(moved, -0.7, 0.7), place)
-        good = good & (np.abs(moved) < 1.5) & (quality < 0.25)
+            width = spot_width((mean - (powers @ base)[part]) / scale, train)
+        fitted = fit_shape(mean, powers[part], scale, train, width, fields=fields)
+        width, base, swing = fitted.width, fitted.base, fitted.swing
+        scale = (powers @ swing)[part]
+        whole = StepTrain(low, high, place, sign, lag)
+        shifts = fitted.shape.shifts(fitted.left / scale, whole)
+        lag = fitted.lag
+        place = np.where(good, place + np.clip(shifts.move, -0.7, 0.7), place)
+        good = good & (np.abs(shifts.move) < 1.5) & (shifts.rest < 0.25)
         if good.sum() < 10:
             raise Unreadable(f"the bars of the {strip.ruler.side} ruler do not stand in their order")
-        if turn > 0 and np.abs(moved[good]).max() < SETTLED:
+        if turn > 0 and np.abs(shifts.move[good]).max() < SETTLED:
             break
-    noise, _ = shape.shifts(strip.scatter[low : high + 1] / scale, low, place, sign)
-    return Bars(strip, at, sign, place, good, noise, shape, base, swing)
+    noise = fitted.shape.shifts(strip.scatter[part] / scale, whole).move
+    return Bars(
+        strip, at, sign, place, good, noise, shifts.doubt, fitted.shape, base, swing, lag, fitted.lift
+    )

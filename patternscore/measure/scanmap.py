@@ -21,7 +21,8 @@ Array = npt.NDArray[np.float64]
 PIECES = {"h": 20, "v": 15}  # spline pieces across the picture
 CELLS = {"h": 16, "v": 12}  # what "local" means for linearity
 SIDE_TERMS = 4
-STIFFNESS = 1e-4  # weight of the spline's third differences, against one bar edge
+BENDS = ((3, 1.0), (4, 0.1))  # samples or lines: what third and fourth differences of the spline come to
+CLEAN = 0.005  # samples or lines: error of a bar edge that even a clean picture has
 MARGIN = 0.08  # picture fraction beyond the edges that the curve may be asked for
 
 
@@ -102,11 +103,12 @@ def _design(x: Array, side: Array, axis: Axis) -> Array:
 
 @lru_cache
 def _penalty(axis: Axis) -> Array:
-    """Third differences of the spline; a faint pull on the cubic, for where only one side is seen."""
+    """Weights on the spline's third and fourth differences."""
     size = PIECES[axis] + 3
-    rough = np.diff(np.eye(size), 3, axis=0)
     penalty = np.zeros((size + SIDE_TERMS, size + SIDE_TERMS))
-    penalty[:size, :size] = STIFFNESS * rough.T @ rough
+    for order, usual in BENDS:
+        rough = np.diff(np.eye(size), order, axis=0) / usual
+        penalty[:size, :size] += rough.T @ rough
     return penalty
 
 
@@ -128,33 +130,41 @@ def fit_scan(bars: list[Bars]) -> ScanMap:
     place = np.concatenate([one.place for one in bars])
     good = np.concatenate([one.good for one in bars])
     noise = np.concatenate([one.noise for one in bars])
+    doubt = np.concatenate([one.doubt for one in bars])
     sides = np.concatenate([np.full(one.at.size, np.sign(one.strip.across - 0.5)) for one in bars])
     design = _design(at, sides if len(bars) > 1 else np.zeros(at.size), axis)
     penalty = _penalty(axis)
     if len(bars) == 1:
         penalty = penalty.copy()
         penalty[np.diag_indices(penalty.shape[0])] += np.repeat([0.0, 1.0], [PIECES[axis] + 3, SIDE_TERMS])
-    weight = good.astype(np.float64)
+    # An edge's error: what noise does to it, measured between halves of the bands, and its doubt.
+    spread = float(np.sqrt(np.mean((noise[good] - np.mean(noise[good])) ** 2)))
+    error = np.sqrt(doubt**2 + spread**2 + CLEAN**2)
+    used = good
     for _ in range(3):
-        weighted = design * weight[:, None]
-        inverse = np.linalg.inv(design.T @ weighted + penalty)
+        weighted = design * (used / error**2)[:, None]
+        inverse = np.linalg.inv(weighted.T @ design + penalty)
         coefficients = inverse @ (weighted.T @ place)
-        left = place - design @ coefficients
-        used = weight > 0
-        limit = max(5.0 * float(np.median(np.abs(left[used]))), 0.25)
+        left = (place - design @ coefficients) / error
+        limit = max(5.0 * float(np.median(np.abs(left[used]))), 4.0)
         fresh = good & (np.abs(left) < limit)
         if np.array_equal(fresh, used):
             break
-        weight = fresh.astype(np.float64)
-    if fresh.sum() < 10:
+        used = fresh
+    if used.sum() < 10:
         raise Unreadable("the bars of the rulers do not run in a smooth scan")
-    # An edge's error: what noise does to it, measured between halves of the bands.
-    spread = float(np.sqrt(np.mean((noise[fresh] - np.mean(noise[fresh])) ** 2)))
-    gram = design.T @ (design * weight[:, None])
+    gain = inverse @ weighted.T
     return ScanMap(
-        axis, coefficients, inverse @ gram @ inverse, spread, at[fresh], place[fresh], left[fresh],
-        float(at[fresh].min()), float(at[fresh].max()),
-    )  # fmt: skip
+        axis,
+        coefficients,
+        gain @ gain.T,
+        spread,
+        at[used],
+        place[used],
+        (left * error)[used],
+        float(at[used].min()),
+        float(at[used].max()),
+    )
 
 
 def linearity(scan: ScanMap) -> Estimate:

@@ -15,25 +15,47 @@ BEFORE, AFTER = 8, 14  # samples before and after a step over which its shape is
 FINE = 8  # points per sample of the tabulated shape
 REACH = 16  # samples either side that the table covers
 WINDOW = 4  # samples either side of an edge that tell its place
-
-
 STIFFNESS = 0.5  # of the free correction, in units of one bar edge
-NARROWEST, WIDEST = 0.2, 6.0  # samples
+NARROWEST, WIDEST = 0.1, 6.0  # samples
+LEVEL_DOUBT = 0.01  # error of a level, of the step, that even a clean picture has
+PLACE_DOUBT = 0.29  # samples: a place known to lie between two samples, and no better
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Shifts:
+    """Moves of steps in samples, rms left about each after its move, and doubt of its place in samples."""
+
+    move: Array
+    rest: Array
+    doubt: Array
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class StepTrain:
-    """Steps up and down over the samples ``low`` to ``high``: where, and +1 (up) or -1 (down)."""
+    """Steps up and down over the samples ``low`` to ``high``.
+
+    Attributes
+    ----------
+    place, sign : (k,) float64
+        Where the steps are, and +1 (up) or -1 (down).
+    lag : float
+        How much later than their number says odd samples were taken: the offset between fields.
+    """
 
     low: int
     high: int
     place: Array
     sign: Array
+    lag: float = 0.0
 
     @property
     def count(self) -> int:
         """Number of samples."""
         return self.high - self.low + 1
+
+    def taken(self, index: npt.NDArray[np.int64]) -> Array:
+        """Coordinates at which samples were taken."""
+        return index + self.lag * (index % 2) if self.lag else index.astype(np.float64)
 
     @property
     def start(self) -> float:
@@ -102,25 +124,29 @@ class StepShape:
 
         return _summed(train, change, min(max(math.ceil(4 * self.width), 2), REACH))
 
-    def shifts(self, left: Array, low: int, place: Array, sign: Array) -> tuple[Array, Array]:
-        """Move that each step needs to take up what is left, and the rms left about it after the move."""
-        index = np.rint(place).astype(np.int64)[:, None] + np.arange(-WINDOW, WINDOW + 1)[None, :]
-        slope = -self.slope(index - place[:, None]) * sign[:, None]
-        inside = (index >= low) & (index < low + left.size)
-        values = np.where(inside, left[np.clip(index - low, 0, left.size - 1)], 0.0)
+    def shifts(self, left: Array, train: StepTrain) -> Shifts:
+        """Find the move of each step that takes up what is left of a train's bars, 0 to 1.
+
+        Where samples fall beside a step steeper than their spacing, they do not tell where between them it
+        is; its place then stays, and the doubt says so.
+        """
+        index = np.rint(train.place).astype(np.int64)[:, None] + np.arange(-WINDOW, WINDOW + 1)[None, :]
+        slope = -self.slope(train.taken(index) - train.place[:, None]) * train.sign[:, None]
+        inside = (index >= train.low) & (index <= train.high)
+        values = np.where(inside, left[np.clip(index - train.low, 0, left.size - 1)], 0.0)
         slope = np.where(inside, slope, 0.0)
-        energy = np.maximum(np.sum(slope * slope, 1), 1e-6)
+        energy = np.sum(slope * slope, 1) + (LEVEL_DOUBT / PLACE_DOUBT) ** 2
         move = np.sum(slope * values, 1) / energy
         rest = values - slope * move[:, None]
-        return move, np.sqrt(np.mean(rest * rest, 1))
+        return Shifts(move, np.sqrt(np.mean(rest * rest, 1)), LEVEL_DOUBT / np.sqrt(energy))
 
 
 def _summed(train: StepTrain, values: Callable[[Array], Array], reach: int) -> Array:
     """Sum of signed values about every step, up to ``reach`` samples from it."""
-    index = np.floor(train.place).astype(np.int64)[:, None] + np.arange(-reach, reach)[None, :] - train.low
-    signed = values(index + train.low - train.place[:, None]) * train.sign[:, None]
-    inside = (index >= 0) & (index < train.count)
-    return np.bincount(index[inside], weights=signed[inside], minlength=train.count)
+    index = np.floor(train.place).astype(np.int64)[:, None] + np.arange(-reach, reach)[None, :]
+    signed = values(train.taken(index) - train.place[:, None]) * train.sign[:, None]
+    inside = (index >= train.low) & (index <= train.high)
+    return np.bincount(index[inside] - train.low, weights=signed[inside], minlength=train.count)
 
 
 def _taus() -> Array:
@@ -129,16 +155,34 @@ def _taus() -> Array:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class ShapeFit:
-    """Step shape, the width to try next, levels of dark and of light above dark, and what they leave, IRE."""
+    """Step shape and levels of a train of bars.
+
+    Attributes
+    ----------
+    shape : StepShape
+        The common step.
+    width, lag : float
+        Width of the spot and lag of odd samples to try next.
+    base, swing : (m,) float64
+        Polynomials of the level of dark bars and of light above dark, IRE.
+    lift : float
+        Level of odd samples above the others, IRE.
+    left : (n,) float64
+        What all this leaves, IRE.
+    """
 
     shape: StepShape
     width: float
+    lag: float
     base: Array
     swing: Array
+    lift: float
     left: Array
 
 
-def fit_shape(mean: Array, powers: Array, scale: Array, train: StepTrain, width: float) -> ShapeFit:
+def fit_shape(
+    mean: Array, powers: Array, scale: Array, train: StepTrain, width: float, *, fields: bool
+) -> ShapeFit:
     """Fit the common shape of steps at known places, together with the levels they run between.
 
     Parameters
@@ -154,29 +198,40 @@ def fit_shape(mean: Array, powers: Array, scale: Array, train: StepTrain, width:
     width : float
         Standard deviation in samples of the Gaussian step to which a correction is fitted, continuous and
         linear between whole samples.
+    fields : bool
+        Whether odd samples are of another field, with a lag and a lift to be fitted.
     """
     ground = StepShape.gaussian(width)
     wave = ground.wave(train)
     hats = _hats(train) * scale[:, None]
-    widening = ground.widening(train) * scale
-    design = np.concatenate([powers, powers * wave[:, None], widening[:, None], hats], axis=1)
-    count = 2 * powers.shape[1]
+    count = powers.shape[1]
+    columns = [powers, powers * wave[:, None], (ground.widening(train) * scale)[:, None]]
+    if fields:
+        odd = (np.arange(train.low, train.high + 1) % 2).astype(np.float64)
+        steep = _summed(train, ground.slope, REACH) * scale
+        columns += [np.stack([odd, odd * steep, (1.0 - odd) * steep], axis=1)]
+    first = 2 * count + columns[2].shape[1] + (3 if fields else 0)
+    design = np.concatenate([*columns, hats], axis=1)
     normal = design.T @ design
     # The correction is held to small values, so that levels and shape come apart even where every bar is
     # narrower than the step, and so that what a wider spot explains is given to the spot.
     held = np.full(normal.shape[0], 1e-6)
-    held[count + 1 :] = STIFFNESS * float(np.mean(scale**2))
+    held[first:] = STIFFNESS * float(np.mean(scale**2))
     normal[np.diag_indices(normal.shape[0])] += held
     found = np.linalg.solve(normal, design.T @ mean)
-    correction = np.concatenate([[0.0], found[count + 1 :], [0.0]])
-    next_width = width + min(max(float(found[count]), -0.3 * width), 0.3 * width)
+    wider = min(max(float(found[2 * count]), -0.3 * width), 0.3 * width)
+    lift, later = 0.0, 0.0
+    if fields:
+        lift, later = float(found[first - 3]), float(found[first - 2] - found[first - 1])
+    correction = np.concatenate([[0.0], found[first:], [0.0]])
     table = ground.table + np.interp(_taus(), np.arange(-BEFORE, AFTER + 1), correction)
-    shape = StepShape(table, width)
     return ShapeFit(
-        shape,
-        min(max(next_width, NARROWEST), WIDEST),
-        found[: count // 2],
-        found[count // 2 : count],
+        StepShape(table, width),
+        min(max(width + wider, NARROWEST), WIDEST),
+        train.lag + min(max(later, -0.3), 0.3),
+        found[:count],
+        found[count : 2 * count],
+        lift,
         mean - np.asarray(design @ found),
     )
 
@@ -185,7 +240,7 @@ def _hats(train: StepTrain) -> Array:
     """Triangles one sample apart about every step, signed and summed: (n, BEFORE + AFTER - 1)."""
     place = train.place[:, None]
     index = np.ceil(train.place - BEFORE).astype(np.int64)[:, None] + np.arange(BEFORE + AFTER)[None, :]
-    where = index - place + BEFORE
+    where = np.clip(train.taken(index) - place + BEFORE, 0.0, BEFORE + AFTER)
     cell = np.clip(where.astype(np.int64), 0, BEFORE + AFTER - 1)
     part = where - cell
     row = index - train.low
