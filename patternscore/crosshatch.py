@@ -67,7 +67,7 @@ def _profiles(
 
 
 def _clear_arms(grid: Grid) -> Array:
-    """(n, 2, 2) for each crossing: [0] arms up, down of the upright line, [1] arms left, right of the other."""
+    """Clear arms of each crossing, (n, 2, 2): up and down of the upright line, left and right of the other."""
     return np.array([[[way in arms for way in pair] for pair in ("ud", "lr")] for arms in grid.arms], float)
 
 
@@ -106,8 +106,19 @@ def _shape(lines: _Lines, shifts: Array) -> tuple[Array, Array]:
     return places, np.convolve(np.pad(shape, 2, mode="edge"), [0.1, 0.2, 0.4, 0.2, 0.1], "valid")
 
 
-def _refine(lines: _Lines, shifts: Array, rounds: int = 3) -> tuple[Array, Array, Array]:
+def noise_level(luma: Array) -> float:
+    """rms noise of a frame in IRE, from second differences along the line; most of a pattern is flat."""
+    bend = luma[::3, 2:] - 2.0 * luma[::3, 1:-1] + luma[::3, :-2]
+    return float(1.4826 * np.median(np.abs(bend)) / np.sqrt(6.0))
+
+
+def _refine(lines: _Lines, shifts: Array, noise: Array, rounds: int = 3) -> tuple[Array, Array, Array]:
     """Least-squares shift of each line against the common profile.
+
+    Parameters
+    ----------
+    noise : (n,) array
+        rms noise of each profile, IRE.
 
     Returns
     -------
@@ -128,18 +139,16 @@ def _refine(lines: _Lines, shifts: Array, rounds: int = 3) -> tuple[Array, Array
         right = np.swapaxes(design, 1, 2) @ lines.profiles[:, :, None]
         inverse = np.linalg.inv(normal)
         solved = (inverse @ right)[:, :, 0]
-        left = lines.profiles - (design @ solved[:, :, None])[:, :, 0]
-        noise = np.sqrt(np.mean(left**2, axis=1) * left.shape[1] / max(left.shape[1] - 4, 1))
         height = solved[:, 2]
         safe = np.maximum(height, 0.1)
         step = -solved[:, 3] / safe
-        sigma = np.sqrt(inverse[:, 3, 3]) * np.maximum(noise, 0.2 * np.median(noise)) / safe
+        sigma = np.sqrt(inverse[:, 3, 3]) * noise / safe
         shifts = shifts + np.clip(step, -2.0, 2.0)
     return shifts, sigma, height
 
 
 def measure_crossings(
-    luma: Array, grid: Grid, warp: Warp, cell: tuple[float, float], wide: bool
+    luma: Array, grid: Grid, warp: Warp, cell: tuple[float, float], noise: float, wide: bool
 ) -> Crossings:
     """Crossings that are there, near where the warp puts them.
 
@@ -148,6 +157,8 @@ def measure_crossings(
     luma : (rows, samples) float32, IRE
     cell : (float, float)
         Size of a cell in samples and lines.
+    noise : float
+        rms noise of the frame, IRE; the sigmas follow from it.
     wide : bool
         Search over a third of a cell; else over a sixth, which keeps other features out.
     """
@@ -164,7 +175,8 @@ def measure_crossings(
     for axis in (0, 1):
         lines = _profiles(luma, points, slopes, arms[:, axis], axis, reach[axis], clear)
         start = _coarse(lines, 0.05 * cell[axis]) if wide else np.zeros(len(points))
-        shifts[:, axis], sigma[:, axis], height = _refine(lines, start)
+        rows = arms[:, axis].sum(1) * (clear[1] - clear[0] + 1)
+        shifts[:, axis], sigma[:, axis], height = _refine(lines, start, noise / np.sqrt(rows), 2 + (not wide))
         good &= (height > 0.4 * np.median(height)) & (np.abs(shifts[:, axis]) < reach[axis] - 2)
     # The two lines lean a little: go from the predicted crossing along both to where they meet.
     lean_x = slopes[:, 0, 1] / slopes[:, 1, 1]

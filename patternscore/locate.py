@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from patternscore.crosshatch import measure_crossings
+from patternscore.crosshatch import measure_crossings, noise_level
 from patternscore.errors import UnscorableFrame
 from patternscore.frame import Frame
 from patternscore.located import Crossings, Located
@@ -77,13 +77,14 @@ def _bend(frame: Frame, plan: Plan, start: Warp) -> tuple[Warp, Crossings, float
         float(np.median(np.diff(grid.columns))) * raster.width_samples,
         float(np.median(np.diff(grid.rows))) * raster.height_lines,
     )
+    noise = max(noise_level(frame.luma), frame.code_step / np.sqrt(12.0), 1e-3)
     warp = start
-    found = measure_crossings(frame.luma, grid, warp, cell, wide=True)
+    found = measure_crossings(frame.luma, grid, warp, cell, noise, wide=True)
     warp, _, coarse = _fit(found, 3, 6.0, warp)
-    found = measure_crossings(frame.luma, grid, warp, cell, wide=False)
+    found = measure_crossings(frame.luma, grid, warp, cell, noise, wide=False)
     warp, kept, misfit = _fit(found, 4, 1.0, warp)
     if coarse > _ROUGH:  # what lay far from the third-degree warp is measured again from closer by
-        found = measure_crossings(frame.luma, grid, warp, cell, wide=False)
+        found = measure_crossings(frame.luma, grid, warp, cell, noise, wide=False)
         warp, kept, misfit = _fit(found, 4, 1.0, warp)
     return warp, _chosen(found, kept), misfit
 

@@ -145,7 +145,7 @@ def _poses(places: Array, triple: tuple[int, int, int], seen: Array, allowed: Ar
     fits &= (np.abs(poses[:, 0, 1]) < 0.12) & (np.abs(poses[:, 1, 0]) < 0.12)
     poses = poses[fits]
     if len(poses) == 0:
-        return poses
+        return np.empty((0, 3, 2))
     predicted = np.concatenate([places, np.ones((len(places), 1))], 1) @ poses
     distance = np.abs(predicted[:, :, None] - seen[None, None]).max(3)
     distance[:, ~allowed] = 1.0
