@@ -7,13 +7,14 @@ is believed only if it explains the strip far better than a scan that does not f
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
 
 from patternscore.errors import Unreadable
-from patternscore.measure.foldfit import LATER, LEAST, View, fit_fold
+from patternscore.measure.foldfit import LEAST, View, fit_fold
 from patternscore.measure.foldmodel import Band, unfolded_misfit
 from patternscore.measure.ruler import Bars
 from patternscore.measure.stepshape import StepShape
@@ -23,7 +24,7 @@ from patternscore.reading import Estimate
 Array = npt.NDArray[np.float64]
 DEPTH = 0.46  # picture fraction that a fold of 2.5 us at 8 times scan speed can show, and some more
 PLAIN = 0.10  # rms misfit, of the bars' contrast, up to which the unfolded scan is taken as it is
-BETTER = 0.3  # part of the unfolded scan's squared misfit that the folded one may leave
+BETTER = 0.5  # part of the unfolded scan's misfit that the folded one may leave
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -67,24 +68,31 @@ def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float) -> View:
     """
     far = side in ("right", "bottom")
     count = bars[0].strip.mean.size
-    bands, certified, length = [], [], 0.0
+    bands, edges, length = [], [], 0.0
     for one in bars:
         found = _band(plan, one, side, far)
         if found is not None:
             bands.append(found[0])
-            certified.append(found[1])
+            edges.append(found[1])
             length = abs(float(found[0].slope(0.0))) / _bars_across(one.strip.ruler)
     if not any(band.walls[1] < 0.05 for band in bands):
         raise Unreadable(f"no ruler is seen near the {side} edge")
-    return View(tuple(bands), count - 1 - start if far else start, length, min(certified))
+    return View(
+        bands=tuple(bands),
+        start=count - 1 - start if far else start,
+        bar=length,
+        certified=min(float(places[0]) for places in edges),
+        latest=min(float(places[1]) for places in edges),
+        blanked=bars[0].strip.axis == "h",
+    )
 
 
 def _bars_across(ruler: Ruler) -> float:
     return len(ruler.bits) / (ruler.boundaries[-1] - ruler.boundaries[0])
 
 
-def _band(plan: Plan, bars: Bars, side: Side, far: bool) -> tuple[Band, float] | None:
-    """One band seen from the edge, and where its forward code begins; None where it cannot be used."""
+def _band(plan: Plan, bars: Bars, side: Side, far: bool) -> tuple[Band, Array] | None:
+    """One band seen from the edge, and where its certified bar edges lie; None where it cannot be used."""
     strip = bars.strip
     count = strip.mean.size
     edge_rows = strip.seen[-1 - np.arange(count // 6)] if far else strip.seen[: count // 6]
@@ -115,11 +123,15 @@ def _band(plan: Plan, bars: Bars, side: Side, far: bool) -> tuple[Band, float] |
         t, level, shape = (count - 1 - t)[::-1], level[::-1], StepShape(1.0 - shape.table[::-1], shape.width)
     noise = float(np.sqrt(np.mean(strip.scatter**2))) / bars.contrast
     content = np.concatenate([[black], content])
+    if walls[1] > 1.5 * bar:
+        content[1] = _seen_corner(
+            level, float(forward @ [1.0, walls[1], walls[1] ** 2]), bar * forward[1], content[1]
+        )
     reader = Band(t, level, walls, content, shape, forward, walls, noise)
     met = reader.reach(walls)
     nearest = use[np.argmin(np.abs(at[use][None, :] - walls[:, None]), axis=1)]
     met = np.where(np.abs(at[nearest] - walls) < 1e-6, place[nearest], met)
-    return replace(reader, met=met), float(place[use[0]])
+    return replace(reader, met=met), place[use]
 
 
 def _forward(at: Array, place: Array, doubt: Array, bar: float) -> tuple[Array, int]:
@@ -166,6 +178,14 @@ def _corner(plan: Plan, ruler: Ruler, side: Side) -> float:
     return float(inside @ np.asarray(crossing.bits, dtype=np.float64)) / total if total > 0 else 0.0
 
 
+def _seen_corner(level: Array, end: float, bar: float, reckoned: float) -> float:
+    """Level of a corner that belongs to another ruler, as seen just before this one begins."""
+    low, high = int(end - 1.4 * bar), int(end - 0.5 * bar)
+    if low < 0 or high - low < 2:
+        return reckoned
+    return min(max(float(np.mean(level[low:high])), reckoned - 0.15), reckoned + 0.15)
+
+
 def find_fold(view: View, edge_sigma: float) -> Fold:
     """Decide for or against a fold and measure it.
 
@@ -186,23 +206,29 @@ def find_fold(view: View, edge_sigma: float) -> Fold:
     Unreadable
         If something stands before the forward code that no fold explains.
     """
-    low = max(0, int(np.ceil(view.start - 0.8 * view.bar)))
-    high = int(view.certified + (LATER + 2.0) * view.bar) + 1
+    ahead = view.start - 0.8 * view.bar if view.blanked else view.start + 0.6
+    low, high = (
+        max(0, math.ceil(ahead)),
+        int(max(view.latest, view.certified + view.bar) + 1.5 * view.bar) + 1,
+    )
     view = replace(view, bands=tuple(band.between(low, high) for band in view.bands))
-    before = [band.t < view.certified for band in view.bands]
-    left = [unfolded_misfit(band, view.start)[part] for band, part in zip(view.bands, before, strict=True)]
-    plain = _rms(left)
+    plain = _misfit_before(view, [unfolded_misfit(band, view.black_until) for band in view.bands])
     none = Fold(Estimate(0.0, max(edge_sigma, 1e-3)), misfit=(plain, plain))
     if plain < PLAIN:
         return none
     fit = fit_fold(view)
-    if fit.misfit**2 < BETTER * plain**2 and fit.length.value > LEAST * view.bar:
+    if fit.misfit < BETTER * plain and fit.length.value > LEAST * view.bar:
         return Fold(fit.length, fit.turning, fit.ratio, (plain, fit.misfit))
     if plain < 2.5 * PLAIN or fit.length.value <= LEAST * view.bar:
         return none
     raise Unreadable("what stands before the forward code is neither black nor folded picture")
 
 
-def _rms(left: list[Array]) -> float:
-    """Root mean square over bands."""
-    return float(np.sqrt(np.mean(np.concatenate(left) ** 2)))
+def _misfit_before(view: View, left: list[Array]) -> float:
+    """Rms of what is left where a fold would lie; a stretch of less than a bar counts as one bar."""
+    energy = [
+        float(np.sum(rest[band.t < view.certified] ** 2))
+        / max(float(np.sum(band.t < view.certified)), view.bar)
+        for band, rest in zip(view.bands, left, strict=True)
+    ]
+    return float(np.sqrt(np.mean(energy)))

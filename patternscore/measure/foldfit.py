@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import product
 
 import numpy as np
@@ -15,7 +15,6 @@ Array = npt.NDArray[np.float64]
 LEAST = 0.2  # bars: shorter folds are not told from the edge of blanking
 RATIOS = (2.0, 2.4, 2.8, 3.2, 3.7, 4.3, 5.0, 5.8, 6.7, 7.8, 9.0)
 DURATIONS = (0.05, 1.0, 4.0)  # of the turn, bars
-LATER = 3.3  # bars beyond the first certified edge, which may be a chance one, that the turn is sought
 STARTS = 3  # of the coarse search, that are fitted
 FLOOR = 0.01  # misfit, of the bars' contrast, that even the true scan may leave in a band
 # What is known beforehand of start (bars off nominal), ratio and duration (bars), as mean and standard
@@ -28,14 +27,30 @@ STEPS = np.array([0.02, 0.02, 0.02, 0.05])
 class View:
     """An edge of the picture seen inwards: the bands that run up to it.
 
-    ``start`` is where the active line should start, ``bar`` the length of a bar, ``certified`` the coordinate
-    at which the forward code begins; all in coordinates from that edge of the frame.
+    Attributes
+    ----------
+    bands : tuple of Band
+        The bands.
+    start, bar : float
+        Where the active line should start, and the length of a bar.
+    certified, latest : float
+        Where the forward code begins, and the last place where the scan may turn: there one more bar edge
+        has been read, and two are not there by chance.
+    blanked : bool
+        Whether the step from blanking is seen through the spot, as it is along the line.
     """
 
     bands: tuple[Band, ...]
     start: float
     bar: float
     certified: float
+    latest: float
+    blanked: bool
+
+    @property
+    def black_until(self) -> float:
+        """Where the step from blanking lies; far away where none is seen."""
+        return self.start if self.blanked else -1e3
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -68,7 +83,7 @@ def fit_fold(view: View) -> FoldFit:
     """
     deepest = (view.bands[0].t[-1] - view.start) / float(view.bands[0].slope(0.0))
     bands = tuple(band.shallower(max(10.0 * deepest, 0.2)) for band in view.bands)
-    problem = _Problem(View(bands, view.start, view.bar, view.certified))
+    problem = _Problem(replace(view, bands=bands))
     starts = problem.search()
     endings = [problem.descend(start, turn) for start in starts for turn in TURNS]
     best = min(endings, key=lambda ending: ending.cost)
@@ -108,7 +123,7 @@ class _Problem:
     def left(self, free: Array, turn: Turn) -> Array:
         """Weighted departures for several sets of free parameters, the last four from what is known."""
         parameters = self.parameters(free)
-        levels = [folded(band, parameters, turn) for band in self.view.bands]
+        levels = [folded(band, parameters, turn, self.view.blanked) for band in self.view.bands]
         departure = (np.concatenate(levels, axis=1) - self.target) / self.unit
         return np.concatenate([departure, (free - self.known) * self.pull], axis=1)
 
@@ -116,7 +131,7 @@ class _Problem:
         """Coarse search over turning point, ratio and turn: the best few, as free parameters."""
         view = self.view
         first = view.start / view.bar + LEAST
-        turning = np.arange(first, view.certified / view.bar + LATER, 0.11)
+        turning = np.arange(first, max(view.latest / view.bar, first + 0.1), 0.11)
         free = np.array(list(product(turning, [view.start / view.bar], np.log(RATIOS), np.log(DURATIONS))))
         cost = np.concatenate(
             [self._coarse(chunk) for chunk in np.array_split(free, 1 + free.shape[0] // 200)]
@@ -131,7 +146,7 @@ class _Problem:
 
     def _coarse(self, free: Array) -> Array:
         parameters = self.parameters(free)
-        levels = [folded_coarsely(band, parameters) for band in self.view.bands]
+        levels = [folded_coarsely(band, parameters, self.view.blanked) for band in self.view.bands]
         return np.asarray(np.mean((np.concatenate(levels, axis=1) - self.target) ** 2, axis=1))
 
     def jacobian(self, free: Array, turn: Turn, left: Array) -> Array:

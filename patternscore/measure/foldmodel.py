@@ -94,7 +94,8 @@ def unfolded_misfit(band: Band, start: float) -> Array:
     then it meets the walls where they were read.
     """
     t, first = band.t, band.met[1]
-    begins = np.arange(start, max(first - 1.0, start + 0.2), 0.25)[:, None]
+    earliest = max(start, float(t[0]) - 1.0)
+    begins = np.concatenate([[start], np.arange(earliest, max(first - 1.0, earliest), 0.25)])[:, None]
     walls = np.maximum(band.met[1:], start)
     beyond = np.diff(band.content)[1:] @ band.shape.at(t[None, :] - walls[:, None])
     shown = band.shape.at(t[None, :] - begins)
@@ -159,7 +160,7 @@ def folding(band: Band, parameters: Array) -> Folding:
     return Folding(turning, joined, joined - 0.5 * speed * rise, speed, ratio, 1.0 / rise)
 
 
-def folded(band: Band, parameters: Array, turn: Turn) -> Array:
+def folded(band: Band, parameters: Array, turn: Turn, blanked: bool = True) -> Array:
     """Levels with a fold, for several sets of parameters at once.
 
     Parameters
@@ -170,13 +171,15 @@ def folded(band: Band, parameters: Array, turn: Turn) -> Array:
         As for ``folding``.
     turn : str
         Kind of the turn.
+    blanked : bool
+        Whether the step from blanking is seen.
 
     Returns
     -------
     (c, n) float64
     """
     scan = folding(band, parameters)
-    start = parameters[:, 1:2]
+    start = parameters[:, 1:2] if blanked else np.full((parameters.shape[0], 1), -1e3)
     height = band.walls[None, :] - scan.bottom
     met = height > 0
     height = np.maximum(height, 0.0)
@@ -194,7 +197,9 @@ def folded(band: Band, parameters: Array, turn: Turn) -> Array:
     return np.asarray(band.content[0] + np.einsum("ck,ckn->cn", sizes, values))
 
 
-def folded_coarsely(band: Band, parameters: Array, per: int = 4) -> npt.NDArray[np.float32]:
+def folded_coarsely(
+    band: Band, parameters: Array, blanked: bool = True, per: int = 4
+) -> npt.NDArray[np.float32]:
     """As ``folded`` with a ramp, from content looked up ``per`` times a sample: quick, for a search.
 
     All parameters must share one start of the active line.
@@ -211,7 +216,8 @@ def folded_coarsely(band: Band, parameters: Array, per: int = 4) -> npt.NDArray[
     place = np.where(since * scan.rate >= 1.0, band.position(fine)[None, :], place)
     table = band.content[np.searchsorted(band.walls, (np.arange(-1, CELLS) + 0.5) / CELLS, side="right")]
     level = table.astype(np.float32)[np.clip(place * CELLS + 1.0, 0, CELLS).astype(np.int64)]
-    level[:, fine < parameters[0, 1]] = band.content[0]
+    if blanked:
+        level[:, fine < parameters[0, 1]] = band.content[0]
     away = t[None, :] - fine[:, None]
     upper, lower = band.shape.at(away + 0.5 / per), band.shape.at(away - 0.5 / per)
     upper[0], lower[-1] = 1.0, 0.0  # the stretch's own ends run on before and after it
