@@ -22,8 +22,10 @@ from patternscore.plan import Plan, Ruler, Side
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[np.float64]
+FAR = ("right", "bottom")
 DEPTH = 0.46  # picture fraction that a fold of 2.5 us at 8 times scan speed can show, and some more
 PLAIN = 0.10  # rms misfit, of the bars' contrast, up to which the unfolded scan is taken as it is
+NEIGHBOURS = 7  # bar edges that foretell the next one
 BETTER = 0.5  # part of the unfolded scan's misfit that the folded one may leave
 
 
@@ -66,11 +68,11 @@ def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float) -> View:
     Unreadable
         If the forward code is not found near this edge.
     """
-    far = side in ("right", "bottom")
     count = bars[0].strip.mean.size
+    start = count - 1 - start if side in FAR else start
     bands, edges, length = [], [], 0.0
     for one in bars:
-        found = _band(plan, one, side, far)
+        found = _band(plan, one, side, start)
         if found is not None:
             bands.append(found[0])
             edges.append(found[1])
@@ -79,7 +81,7 @@ def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float) -> View:
         raise Unreadable(f"no ruler is seen near the {side} edge")
     return View(
         bands=tuple(bands),
-        start=count - 1 - start if far else start,
+        start=start,
         bar=length,
         certified=min(float(places[0]) for places in edges),
         latest=min(float(places[1]) for places in edges),
@@ -91,10 +93,10 @@ def _bars_across(ruler: Ruler) -> float:
     return len(ruler.bits) / (ruler.boundaries[-1] - ruler.boundaries[0])
 
 
-def _band(plan: Plan, bars: Bars, side: Side, far: bool) -> tuple[Band, Array] | None:
+def _band(plan: Plan, bars: Bars, side: Side, start: float) -> tuple[Band, Array] | None:
     """One band seen from the edge, and where its certified bar edges lie; None where it cannot be used."""
     strip = bars.strip
-    count = strip.mean.size
+    count, far = strip.mean.size, side in FAR
     edge_rows = strip.seen[-1 - np.arange(count // 6)] if far else strip.seen[: count // 6]
     if edge_rows.mean() < 0.95:
         return None
@@ -105,7 +107,7 @@ def _band(plan: Plan, bars: Bars, side: Side, far: bool) -> tuple[Band, Array] |
     near = np.flatnonzero(at < 0.5)
     wrong = np.flatnonzero(~good[near])
     use = near[int(wrong[-1]) + 1 if wrong.size else 0 :]
-    if use.size < 8 or at[use[0]] > 0.16:
+    if use.size < NEIGHBOURS + 6 or at[use[0]] > 0.16:
         return None
     bar = 1.0 / _bars_across(strip.ruler)
     forward, first = _forward(at[use], place[use], doubt[use], bar)
@@ -124,9 +126,9 @@ def _band(plan: Plan, bars: Bars, side: Side, far: bool) -> tuple[Band, Array] |
     noise = float(np.sqrt(np.mean(strip.scatter**2))) / bars.contrast
     content = np.concatenate([[black], content])
     if walls[1] > 1.5 * bar:
-        content[1] = _seen_corner(
-            level, float(forward @ [1.0, walls[1], walls[1] ** 2]), bar * forward[1], content[1]
-        )
+        end = float(forward @ [1.0, walls[1], walls[1] ** 2])
+        seen = _seen_corner(level, end, bar * float(forward[1]), start)
+        content[1] = content[1] if seen is None else seen
     reader = Band(t, level, walls, content, shape, forward, walls, noise)
     met = reader.reach(walls)
     nearest = use[np.argmin(np.abs(at[use][None, :] - walls[:, None]), axis=1)]
@@ -137,18 +139,26 @@ def _band(plan: Plan, bars: Bars, side: Side, far: bool) -> tuple[Band, Array] |
 def _forward(at: Array, place: Array, doubt: Array, bar: float) -> tuple[Array, int]:
     """Forward scan near the edge, and the index of the first edge that keeps to it.
 
-    The scan is a parabola through bar edges clear of a turn. Edges nearer to the picture's edge may be there
-    by chance, where folded bars look like the code; they count if they lie on the curve.
+    Each edge is foretold from the ``NEIGHBOURS`` next ones further in, by a parabola: folded bars may look
+    like the code by chance, but they do not keep to its pace. The scan itself is a parabola through certified
+    edges clear of the turn.
     """
-    clear = (at >= at[0] + 3.4 * bar) & (at <= at[0] + 0.28)
-    powers = np.polynomial.polynomial.polyvander(at, 2)
-    weighted = powers[clear] / (doubt[clear, None] + 0.02) ** 2
-    # The curve is held back a little: an edge or two must not bend it.
-    normal = weighted.T @ powers[clear] + np.diag([0.0, 0.0, 1e-4])
-    forward = np.linalg.solve(normal, weighted.T @ place[clear])
-    off = np.abs(place - powers @ forward) > 0.04 * bar * forward[1] + 2.0 * doubt
-    astray = np.flatnonzero(off & (at < at[0] + 3.4 * bar))
-    return np.asarray(forward), int(astray[-1]) + 1 if astray.size else 0
+    near = np.arange(min(at.size - NEIGHBOURS, 14))
+    from_these = near[:, None] + 1 + np.arange(NEIGHBOURS)[None, :]
+    away = (at[from_these] - at[near, None]) / bar
+    powers = away[:, :, None] ** np.arange(3)
+    weighted = powers / (doubt[from_these, None] + 0.02) ** 2
+    # A curve of a tenth of a sample over a bar squared is as much as a scan has.
+    spread = np.linalg.inv(np.swapaxes(weighted, 1, 2) @ powers + np.diag([0.0, 0.0, 100.0]))
+    foretold = np.einsum("kj,knj,kn->k", spread[:, 0], weighted, place[from_these])
+    doubtful = np.sqrt(doubt[near] ** 2 + spread[:, 0, 0])
+    off = np.abs(place[near] - foretold) > 0.2 + 2.0 * doubtful
+    first = int(near[off][-1]) + 1 if off.any() else 0
+    clear = (at >= at[first] + 1.5 * bar) & (at <= at[first] + 0.2)
+    powers = np.polynomial.polynomial.polyvander(at[clear], 2)
+    weighted = powers / (doubt[clear, None] + 0.02) ** 2
+    normal = weighted.T @ powers + np.diag([0.0, 0.0, 1e-4])
+    return np.asarray(np.linalg.solve(normal, weighted.T @ place[clear])), first
 
 
 def _content(plan: Plan, ruler: Ruler, side: Side, far: bool) -> tuple[Array, Array]:
@@ -178,12 +188,10 @@ def _corner(plan: Plan, ruler: Ruler, side: Side) -> float:
     return float(inside @ np.asarray(crossing.bits, dtype=np.float64)) / total if total > 0 else 0.0
 
 
-def _seen_corner(level: Array, end: float, bar: float, reckoned: float) -> float:
+def _seen_corner(level: Array, end: float, bar: float, start: float) -> float | None:
     """Level of a corner that belongs to another ruler, as seen just before this one begins."""
-    low, high = int(end - 1.4 * bar), int(end - 0.5 * bar)
-    if low < 0 or high - low < 2:
-        return reckoned
-    return min(max(float(np.mean(level[low:high])), reckoned - 0.15), reckoned + 0.15)
+    low, high = math.ceil(max(end - 1.4 * bar, start + 2.0, 0.0)), int(end - 0.4 * bar)
+    return float(np.mean(level[low:high])) if high - low >= 2 else None
 
 
 def find_fold(view: View, edge_sigma: float) -> Fold:

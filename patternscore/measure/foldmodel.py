@@ -25,6 +25,7 @@ Array = npt.NDArray[np.float64]
 Turn = Literal["ramp", "sine", "soft"]
 TURNS: tuple[Turn, ...] = ("ramp", "sine", "soft")
 LIGHTEST = 0.05  # of the bars' contrast above dark bars: black that is taken for black
+DELAY = 2.2  # samples by which the picture's end may come off nominal, as filters delay the signal
 CELLS = 2000  # of the picture, in which a coarse look tells content apart
 _ROOTS = np.linspace(0.0, 16.0, 1601)
 
@@ -90,16 +91,20 @@ class Band:
 def unfolded_misfit(band: Band, start: float) -> Array:
     """Departures, (n,), of a band from the scan that does not fold and comes nearest to it.
 
-    That scan is black up to where the picture begins, at ``start`` or later, as it is shifted or crushed;
-    then it meets the walls where they were read.
+    That scan is black up to where the picture begins, near ``start`` or later, as it is shifted, delayed or
+    crushed; then it meets the walls where they were read.
     """
-    t, first = band.t, band.met[1]
-    earliest = max(start, float(t[0]) - 1.0)
-    begins = np.concatenate([[start], np.arange(earliest, max(first - 1.0, earliest), 0.25)])[:, None]
-    walls = np.maximum(band.met[1:], start)
-    beyond = np.diff(band.content)[1:] @ band.shape.at(t[None, :] - walls[:, None])
+    t, walls = band.t, band.met[1:]
+    first = max(start, float(t[0])) - DELAY
+    begins = np.arange(first, max(float(walls[0]) - 1.0, first + 2 * DELAY), 0.25)[:, None]
+    steps = np.diff(band.content)[1:]
+    later = walls > begins[-1, 0]
+    beyond = steps[later] @ band.shape.at(t[None, :] - walls[later, None])
     shown = band.shape.at(t[None, :] - begins)
-    rest = band.level - beyond - shown * band.content[1]
+    # Walls that the picture's beginning may hide fall in with it.
+    early = np.maximum(walls[None, ~later], begins)
+    hidden = np.einsum("k,ckn->cn", steps[~later], band.shape.at(t[None, None, :] - early[:, :, None]))
+    rest = band.level - beyond - hidden - shown * band.content[1]
     dark = 1.0 - shown
     # Black is what it is found to be, but never lighter than the dark bars.
     black = np.sum(dark * rest, axis=1) / np.maximum(np.sum(dark * dark, axis=1), 1e-3)

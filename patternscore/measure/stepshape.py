@@ -18,7 +18,7 @@ WINDOW = 4  # samples either side of an edge that tell its place
 STIFFNESS = 0.5  # of the free correction, in units of one bar edge
 NARROWEST, WIDEST = 0.1, 6.0  # samples
 LEVEL_DOUBT = 0.01  # error of a level, of the step, that even a clean picture has
-SHARP = 0.35  # samples: of steps narrower than this the table tells little
+SHARP = 0.3  # samples: how a steeper step runs between samples is not known, so levels there say little
 PLACE_DOUBT = 0.29  # samples: a place known to lie between two samples, and no better
 
 
@@ -136,7 +136,7 @@ class StepShape:
         inside = (index >= train.low) & (index <= train.high)
         values = np.where(inside, left[np.clip(index - train.low, 0, left.size - 1)], 0.0)
         slope = np.where(inside, slope, 0.0)
-        level = LEVEL_DOUBT * (1.0 + 6.0 * math.exp(-((self.width / SHARP) ** 2)))
+        level = LEVEL_DOUBT * (1.0 + 20.0 * math.exp(-((self.width / SHARP) ** 4)))
         energy = np.sum(slope * slope, 1) + (level / PLACE_DOUBT) ** 2
         move = np.sum(slope * values, 1) / energy
         rest = values - slope * move[:, None]
