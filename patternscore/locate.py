@@ -139,7 +139,10 @@ def _checkpoints(plan: Plan) -> tuple[Array, Array]:
 
 
 def likeness(frame: Frame, plan: Plan, warp: Warp) -> float:
-    """Correlation, -1 to 1, of the levels in the frame with those that the plan states there."""
+    """Rank correlation, -1 to 1, of the levels in the frame with those that the plan states there.
+
+    Ranks do not mind gamma, lift or gain.
+    """
     import cv2
 
     points, levels = _checkpoints(plan)
@@ -156,4 +159,10 @@ def likeness(frame: Frame, plan: Plan, warp: Warp) -> float:
     )[0]
     if float(np.std(seen)) < 2.0:
         return 0.0
-    return float(np.corrcoef(seen, levels[inside])[0, 1])
+    return float(np.corrcoef(_ranks(seen), _ranks(levels[inside]))[0, 1])
+
+
+def _ranks(levels: Array) -> Array:
+    """Rank of each level, equal ones sharing their mean rank."""
+    _, index, count = np.unique(levels, return_inverse=True, return_counts=True)
+    return np.asarray((np.cumsum(count) - (count - 1) / 2.0)[index])
