@@ -49,7 +49,7 @@ class Fold:
     misfit: tuple[float, float] = (0.0, 0.0)
 
 
-def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float) -> View:
+def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float, late: float = 0.0) -> View:
     """Look at one edge of the picture.
 
     Parameters
@@ -62,6 +62,8 @@ def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float) -> View:
         The edge.
     start : float
         Frame coordinate at which the active line (the picture lines) starts or ends there.
+    late : float
+        How much later than the scan's place rising edges come, and earlier falling ones.
 
     Raises
     ------
@@ -72,7 +74,7 @@ def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float) -> View:
     start = count - 1 - start if side in FAR else start
     bands, edges, length = [], [], 0.0
     for one in bars:
-        found = _band(plan, one, side, start)
+        found = _band(plan, one, side, start, late)
         if found is not None:
             bands.append(found[0])
             edges.append(found[1])
@@ -93,7 +95,7 @@ def _bars_across(ruler: Ruler) -> float:
     return len(ruler.bits) / (ruler.boundaries[-1] - ruler.boundaries[0])
 
 
-def _band(plan: Plan, bars: Bars, side: Side, start: float) -> tuple[Band, Array] | None:
+def _band(plan: Plan, bars: Bars, side: Side, start: float, late: float) -> tuple[Band, Array] | None:
     """One band seen from the edge, and where its certified bar edges lie; None where it cannot be used."""
     strip = bars.strip
     count, far = strip.mean.size, side in FAR
@@ -102,6 +104,7 @@ def _band(plan: Plan, bars: Bars, side: Side, start: float) -> tuple[Band, Array
         return None
     at = 1.0 - bars.at[::-1] if far else bars.at
     place = count - 1 - bars.place[::-1] if far else bars.place
+    sign = -bars.sign[::-1] if far else bars.sign
     good = bars.good[::-1] if far else bars.good
     doubt = bars.doubt[::-1] if far else bars.doubt
     near = np.flatnonzero(at < 0.5)
@@ -110,7 +113,7 @@ def _band(plan: Plan, bars: Bars, side: Side, start: float) -> tuple[Band, Array
     if use.size < NEIGHBOURS + 6 or at[use[0]] > 0.16:
         return None
     bar = 1.0 / _bars_across(strip.ruler)
-    forward, first = _forward(at[use], place[use], doubt[use], bar)
+    forward, first = _forward(at[use], (place - late * sign)[use], doubt[use], bar)
     use = use[first:]
     u = np.arange(count) * (2.0 / count) - 1.0
     polyval = np.polynomial.polynomial.polyval
@@ -129,7 +132,7 @@ def _band(plan: Plan, bars: Bars, side: Side, start: float) -> tuple[Band, Array
         end = float(forward @ [1.0, walls[1], walls[1] ** 2])
         seen = _seen_corner(level, end, bar * float(forward[1]), start)
         content[1] = content[1] if seen is None else seen
-    reader = Band(t, level, walls, content, shape, forward, walls, noise)
+    reader = Band(t, level, walls, content, shape, forward, walls, late, noise)
     met = reader.reach(walls)
     nearest = use[np.argmin(np.abs(at[use][None, :] - walls[:, None]), axis=1)]
     met = np.where(np.abs(at[nearest] - walls) < 1e-6, place[nearest], met)

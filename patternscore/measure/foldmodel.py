@@ -50,6 +50,8 @@ class Band:
         Coordinate at which the forward scan reaches x, as a parabola: lowest power first.
     met : (m,) float64
         Coordinate at which the forward scan meets each wall: as read, or from the parabola.
+    late : float
+        How much later than the scan's place rising steps come, and earlier falling ones.
     sigma : float
         Standard deviation of ``level`` from noise.
     """
@@ -61,6 +63,7 @@ class Band:
     shape: StepShape
     forward: Array
     met: Array
+    late: float
     sigma: float
 
     def reach(self, x: npt.ArrayLike) -> Array:
@@ -195,6 +198,8 @@ def folded(band: Band, parameters: Array, turn: Turn, blanked: bool = True) -> A
     settle = scan.ratio / scan.rate
     earlier = scan.turning - settle * _time_of_way(turn, height / (scan.speed * scan.ratio * settle))
     steps = np.diff(band.content)[None, :] * met
+    late = band.late * np.sign(steps)
+    earlier, later = earlier - late, np.where(later == band.met, later, later + late)
     places = np.concatenate([start, np.maximum(earlier, start), later], axis=1)
     inner = np.full(start.shape, band.content[-1] - band.content[0])
     sizes = np.concatenate([inner, -steps, steps], axis=1)

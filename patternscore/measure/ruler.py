@@ -203,7 +203,7 @@ def read_bars(strip: Strip) -> Bars:
     at = np.asarray(strip.ruler.boundaries)[index]
     count = strip.mean.size
     expected = strip.expected[index]
-    inside = (expected > 2) & (expected < count - 3)
+    inside = (expected > 0.6) & (expected < count - 1.6)
     inside &= strip.seen[np.clip(np.rint(expected), 0, count - 1).astype(int)]
     at, sign, expected = at[inside], sign[inside], expected[inside]
     if at.size < 12:

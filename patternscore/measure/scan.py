@@ -141,7 +141,8 @@ def _folds(
     folds: dict[str, Fold] = {}
     for end, side in enumerate(SIDES[axis]):
         try:
-            fold = find_fold(view_edge(located.plan, bars, side, nominal[end]), scan.edge_sigma)
+            view = view_edge(located.plan, bars, side, nominal[end], scan.late)
+            fold = find_fold(view, scan.edge_sigma)
         except Unreadable as reason:
             findings.miss(reason.reason, f"fold_{side}")
             continue

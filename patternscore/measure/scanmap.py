@@ -36,6 +36,9 @@ class ScanMap:
         Along the line (frame coordinate in samples) or down the frame (in lines).
     coefficients : (m,) float64
         Of the spline, then of the cubic between the sides.
+    late : float
+        How much later than falling edges rising ones cross half level, halved: clipping and gamma move them
+        apart.
     covariance : (m, m) float64
         Of the coefficients, per unit variance of a bar edge.
     edge_sigma : float
@@ -48,6 +51,7 @@ class ScanMap:
 
     axis: Axis
     coefficients: Array
+    late: float
     covariance: Array
     edge_sigma: float
     at: Array
@@ -105,7 +109,7 @@ def _design(x: Array, side: Array, axis: Axis) -> Array:
 def _penalty(axis: Axis) -> Array:
     """Weights on the spline's third and fourth differences."""
     size = PIECES[axis] + 3
-    penalty = np.zeros((size + SIDE_TERMS, size + SIDE_TERMS))
+    penalty = np.zeros((size + SIDE_TERMS + 1, size + SIDE_TERMS + 1))
     for order, usual in BENDS:
         rough = np.diff(np.eye(size), order, axis=0) / usual
         penalty[:size, :size] += rough.T @ rough
@@ -133,10 +137,13 @@ def fit_scan(bars: list[Bars]) -> ScanMap:
     doubt = np.concatenate([one.doubt for one in bars])
     sides = np.concatenate([np.full(one.at.size, np.sign(one.strip.across - 0.5)) for one in bars])
     design = _design(at, sides if len(bars) > 1 else np.zeros(at.size), axis)
+    design = np.concatenate([design, np.concatenate([one.sign for one in bars])[:, None]], axis=1)
     penalty = _penalty(axis)
     if len(bars) == 1:
         penalty = penalty.copy()
-        penalty[np.diag_indices(penalty.shape[0])] += np.repeat([0.0, 1.0], [PIECES[axis] + 3, SIDE_TERMS])
+        penalty[np.diag_indices(penalty.shape[0])] += np.repeat(
+            [0.0, 1.0, 0.0], [PIECES[axis] + 3, SIDE_TERMS, 1]
+        )
     # An edge's error: what noise does to it, measured between halves of the bands, and its doubt.
     spread = float(np.sqrt(np.mean((noise[good] - np.mean(noise[good])) ** 2)))
     error = np.sqrt(doubt**2 + spread**2 + CLEAN**2)
@@ -156,8 +163,9 @@ def fit_scan(bars: list[Bars]) -> ScanMap:
     gain = inverse @ weighted.T
     return ScanMap(
         axis,
-        coefficients,
-        gain @ gain.T,
+        coefficients[:-1],
+        float(coefficients[-1]),
+        (gain @ gain.T)[:-1, :-1],
         spread,
         at[used],
         place[used],

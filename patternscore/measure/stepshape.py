@@ -136,7 +136,7 @@ class StepShape:
         inside = (index >= train.low) & (index <= train.high)
         values = np.where(inside, left[np.clip(index - train.low, 0, left.size - 1)], 0.0)
         slope = np.where(inside, slope, 0.0)
-        level = LEVEL_DOUBT * (1.0 + 20.0 * math.exp(-((self.width / SHARP) ** 4)))
+        level = LEVEL_DOUBT * (1.0 + 30.0 * math.exp(-((self.width / SHARP) ** 6)))
         energy = np.sum(slope * slope, 1) + (level / PLACE_DOUBT) ** 2
         move = np.sum(slope * values, 1) / energy
         rest = values - slope * move[:, None]
