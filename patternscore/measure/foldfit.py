@@ -3,54 +3,23 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from itertools import product
 
 import numpy as np
 import numpy.typing as npt
 
-from patternscore.measure.foldmodel import TURNS, Band, Turn, folded, folded_coarsely
+from patternscore.measure.foldmodel import TURNS, Turn, folded
+from patternscore.measure.foldsearch import bent_starts, sharp_starts
+from patternscore.measure.foldview import View
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[np.float64]
-LEAST = 0.2  # bars: shorter folds are not told from the edge of blanking
-RATIOS = (2.0, 2.4, 2.8, 3.2, 3.7, 4.3, 5.0, 5.8, 6.7, 7.8, 9.0)
-DURATIONS = (0.05, 1.0, 4.0)  # of the turn, bars
-STARTS = 3  # of the coarse search, that are fitted
+SHARP, BENT = 5, 2  # starts from the coarse searches
+KEPT = 2  # of them, fitted to the end with every kind of turn
 FLOOR = 0.01  # misfit, of the bars' contrast, that even the true scan may leave in a band
 # What is known beforehand of start (bars off nominal), ratio and duration (bars), as mean and standard
 # deviation, the last two of their logarithms: weak, and decisive only where the bars leave it open.
 KNOWN_START, KNOWN_RATIO, KNOWN_TURN = (0.0, 0.15), (np.log(4.8), 0.6), (np.log(0.25), 1.0)
 STEPS = np.array([0.02, 0.02, 0.02, 0.05])
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class View:
-    """An edge of the picture seen inwards: the bands that run up to it.
-
-    Attributes
-    ----------
-    bands : tuple of Band
-        The bands.
-    start, bar : float
-        Where the active line should start, and the length of a bar.
-    certified, latest : float
-        Where the forward code begins, and the last place where the scan may turn: there one more bar edge
-        has been read, and two are not there by chance.
-    blanked : bool
-        Whether the step from blanking is seen through the spot, as it is along the line.
-    """
-
-    bands: tuple[Band, ...]
-    start: float
-    bar: float
-    certified: float
-    latest: float
-    blanked: bool
-
-    @property
-    def black_until(self) -> float:
-        """Where the step from blanking lies; far away where none is seen."""
-        return self.start if self.blanked else -1e3
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -83,9 +52,11 @@ def fit_fold(view: View) -> FoldFit:
     """
     deepest = (view.bands[0].t[-1] - view.start) / float(view.bands[0].slope(0.0))
     bands = tuple(band.shallower(max(10.0 * deepest, 0.2)) for band in view.bands)
-    problem = _Problem(replace(view, bands=bands))
-    starts = problem.search()
-    endings = [problem.descend(start, turn) for start in starts for turn in TURNS]
+    view = replace(view, bands=bands)
+    problem = _Problem(view)
+    starts = problem.free(np.concatenate([sharp_starts(view, SHARP), bent_starts(view, BENT)]))
+    screened = sorted((problem.descend(start, "ramp", 5) for start in starts), key=lambda end: end.cost)
+    endings = [problem.descend(end.free, turn, 12) for end in screened[:KEPT] for turn in TURNS]
     best = min(endings, key=lambda ending: ending.cost)
     weights = np.exp(-0.5 * np.array([ending.cost - best.cost for ending in endings]))
     weights /= weights.sum()
@@ -120,6 +91,12 @@ class _Problem:
         turn = np.exp(np.clip(free[:, 3:4], np.log(0.02), np.log(12.0)))
         return np.concatenate([free[:, :2] * bar, ratio, turn * bar], axis=1)
 
+    def free(self, parameters: Array) -> Array:
+        """Free parameters of the model's parameters."""
+        bar = self.view.bar
+        logs = np.log(parameters[:, 2:] / np.array([1.0, bar]))
+        return np.concatenate([parameters[:, :2] / bar, logs], axis=1)
+
     def left(self, free: Array, turn: Turn) -> Array:
         """Weighted departures for several sets of free parameters, the last four from what is known."""
         parameters = self.parameters(free)
@@ -127,38 +104,16 @@ class _Problem:
         departure = (np.concatenate(levels, axis=1) - self.target) / self.unit
         return np.concatenate([departure, (free - self.known) * self.pull], axis=1)
 
-    def search(self) -> Array:
-        """Coarse search over turning point, ratio and turn: the best few, as free parameters."""
-        view = self.view
-        first = view.start / view.bar + LEAST
-        turning = np.arange(first, max(view.latest / view.bar, first + 0.1), 0.11)
-        free = np.array(list(product(turning, [view.start / view.bar], np.log(RATIOS), np.log(DURATIONS))))
-        cost = np.concatenate(
-            [self._coarse(chunk) for chunk in np.array_split(free, 1 + free.shape[0] // 200)]
-        )
-        chosen: list[int] = []
-        for candidate in np.argsort(cost)[:300]:
-            if all(abs(free[candidate, 0] - free[other, 0]) > 0.3 for other in chosen):
-                chosen.append(int(candidate))
-            if len(chosen) == STARTS:
-                break
-        return free[chosen]
-
-    def _coarse(self, free: Array) -> Array:
-        parameters = self.parameters(free)
-        levels = [folded_coarsely(band, parameters, self.view.blanked) for band in self.view.bands]
-        return np.asarray(np.mean((np.concatenate(levels, axis=1) - self.target) ** 2, axis=1))
-
     def jacobian(self, free: Array, turn: Turn, left: Array) -> Array:
         """Slopes of the departures by each free parameter, (4, n)."""
         return np.asarray((self.left(free[None, :] + np.diag(STEPS), turn) - left) / STEPS[:, None])
 
-    def descend(self, start: Array, turn: Turn) -> _Ending:
+    def descend(self, start: Array, turn: Turn, most: int) -> _Ending:
         """Levenberg-Marquardt from one start."""
         free, damping = start.copy(), 1e-2
         left = self.left(free[None, :], turn)[0]
         slopes = self.jacobian(free, turn, left)
-        for _ in range(12):
+        for _ in range(most):
             normal = slopes @ slopes.T
             move = -np.linalg.solve(normal + damping * np.diag(np.diag(normal) + 1e-9), slopes @ left)
             move = np.clip(move, [-0.4, -0.15, -0.4, -0.8], [0.4, 0.15, 0.4, 0.8])

@@ -11,7 +11,8 @@ import numpy.typing as npt
 from patternscore.errors import Unreadable
 from patternscore.frame import Frame
 from patternscore.located import Located
-from patternscore.measure.fold import Fold, find_fold, view_edge
+from patternscore.measure.fold import Fold, find_fold
+from patternscore.measure.foldview import view_edge
 from patternscore.measure.ruler import Axis, Bars, axis_of, read_bars, straighten
 from patternscore.measure.scanmap import ScanMap, crush, fit_scan, linearity
 from patternscore.measure.stepshape import StepShape
