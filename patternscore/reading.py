@@ -59,7 +59,10 @@ class Findings:
     traces: dict[str, Any] = field(default_factory=dict)
 
     def add(self, key: str, unit: str, estimate: Estimate, where: str = "picture") -> None:
-        """Add a reading."""
+        """Add a reading; one that did not come out as a number is said to be missing instead."""
+        if not (math.isfinite(estimate.value) and math.isfinite(estimate.sigma)):
+            self.miss("the fit did not settle on a value", key)
+            return
         self.readings.append(Reading(key, float(estimate.value), unit, float(estimate.sigma), where))
 
     def miss(self, reason: str, *keys: str) -> None:
