@@ -46,14 +46,7 @@ STEPS_IRE = (
     (20, 25, 30, 40, 50, 60, 70, 76),
     (82, 88, 90, 92, 94, 96, 98, 100),
 )
-BURSTS_MHZ = (
-    (0.5, 1.3),
-    (1.0, 1.1),
-    (2.0, 0.8),
-    (3.0, 0.8),
-    (4.0, 0.8),
-    (5.0, 0.8),
-)  # frequency, width in cells
+BURSTS_MHZ = ((0.5, 2), (1.0, 3), (2.0, 5), (3.0, 7), (4.0, 10), (5.0, 13))  # frequency, whole cycles
 MARK_RADIUS = 0.3  # cells
 # Cell centres of the marks and the hand of each; no turn or reflection of the set falls on itself.
 MARKS = (
@@ -87,7 +80,7 @@ def chart_plan(standard: Standard) -> Plan:
         flats=_flats(),
         field=_field(),
         rulers=_rulers(),
-        bursts=_bursts(),
+        bursts=_bursts(standard),
         marks=tuple(Mark(_x(x), _y(y), hand, MARK_RADIUS / ROWS, DARK, LIGHT) for x, y, hand in MARKS),
     )
 
@@ -140,7 +133,7 @@ def _side_edges() -> list[Edge]:
 
 
 def square_corners(place: str) -> tuple[tuple[float, float], ...]:
-    """Corners of the slanted square of a corner block, in cells: top left, top right, bottom right, bottom left."""
+    """Corners of the slanted square of a corner block, in cells, clockwise from the top left one."""
     x0, y0, x1, y1 = CORNER_BLOCKS[place]
     cx, cy, half = (x0 + x1) / 2, (y0 + y1) / 2, SQUARE_SIDE / 2
     lean = half * SLANT
@@ -245,12 +238,15 @@ def _flats() -> tuple[Patch, ...]:
     )
 
 
-def _bursts() -> tuple[Burst, ...]:
-    left, y0, _, y1 = BURST_STRIP
+def _bursts(standard: Standard) -> tuple[Burst, ...]:
+    """Packets of whole cycles, from one end of their strip to the other with equal gaps of ground."""
+    left, y0, right, y1 = BURST_STRIP
+    wide = [cycles / mhz * COLUMNS / standard.active_us for mhz, cycles in BURSTS_MHZ]
+    gap = (right - left - sum(wide)) / (len(wide) - 1)
     bursts = []
-    for mhz, wide in BURSTS_MHZ:
-        bursts.append(Burst(_rect((left, y0, left + wide, y1)), mhz, GROUND, 35.0))
-        left += wide
+    for (mhz, _), width in zip(BURSTS_MHZ, wide, strict=True):
+        bursts.append(Burst(_rect((left, y0, left + width, y1)), mhz, GROUND, 35.0))
+        left += width + gap
     return tuple(bursts)
 
 

@@ -2,17 +2,17 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from patternscore.chart.lettering import placed
-from patternscore.chart.raster import disc_outline
-from patternscore.chart.shapes import Box, Disc, Lettering, Polygon, Shape, shapes
+from patternscore.chart.lettering import Lettering, outlines
+from patternscore.chart.shapes import Bars, Disc, Polygon, Shape, layers
 from patternscore.errors import UsageError
 from patternscore.layout import chart_plan
-from patternscore.plan import Burst
+from patternscore.plan import Burst, Rect
 from patternscore.standard import ASPECT, Standard
 
 HIGH_INCHES = 6.0
@@ -31,9 +31,10 @@ def write_drawing(path: Path, standard: Standard) -> None:
     axes.set_axis_off()
     axes.set_xlim(0.0, 1.0)
     axes.set_ylim(1.0, 0.0)
-    for shape in shapes(chart_plan(standard)):
-        for artist in _artists(shape, standard):
-            axes.add_patch(artist)
+    for layer in layers(chart_plan(standard)):
+        for shape in layer:
+            for artist in _artists(shape, standard):
+                axes.add_patch(artist)
     kind = path.suffix.lower().lstrip(".")
     dates = {"Date": None} if kind == "svg" else {"CreationDate": None, "ModDate": None}
     title = {"Title": f"patternscore chart {standard.name}"}
@@ -44,19 +45,44 @@ def write_drawing(path: Path, standard: Standard) -> None:
             raise UsageError(f"{path}: cannot be written ({error.strerror}); name another place") from None
 
 
-def _artists(shape: Shape, standard: Standard) -> list[Any]:
+def _artists(shape: Shape, standard: Standard) -> Iterator[Any]:
     match shape:
-        case Box():
-            return [_rectangle(shape.rect.x0, shape.rect.y0, shape.rect.x1, shape.rect.y1, shape.level)]
+        case Bars():
+            yield from _bars(shape)
         case Burst():
-            return _slices(shape, standard)
+            yield from _bars(_sliced(shape, standard))
         case Polygon():
-            return [_contours([np.array(shape.corners)], shape.level)]
+            yield _filled([np.array(shape.corners)], shape.level)
         case Disc():
-            return [_contours(disc_outline(shape), shape.level)]
+            yield _disc(shape)
         case Lettering():
-            label = (shape.text, shape.x, shape.y, shape.height, shape.level, shape.anchor)
-            return [_contours(placed(label), shape.level)]
+            yield _filled(outlines(shape), shape.level)
+
+
+def _bars(bars: Bars) -> Iterator[Any]:
+    """Each bar reaches to the far side, under those after it: no hairline of the ground shows between."""
+    from matplotlib.patches import Rectangle
+
+    rect = bars.rect
+    previous = None
+    for start, level in zip(bars.bounds[:-1], bars.levels, strict=True):
+        if level == previous:
+            continue
+        previous = level
+        left, top = (start, rect.y0) if bars.axis == "h" else (rect.x0, start)
+        yield Rectangle(
+            (left, top), rect.x1 - left, rect.y1 - top, facecolor=_grey(level), linewidth=0, antialiased=False
+        )
+
+
+def _sliced(burst: Burst, standard: Standard) -> Bars:
+    """A burst as slices, as many as show a smooth sine in print."""
+    rect = burst.rect
+    cycles = burst.mhz * standard.active_us * (rect.x1 - rect.x0)
+    bounds = np.linspace(rect.x0, rect.x1, int(np.ceil(cycles * _SLICES)) + 1)
+    phase = 2.0 * np.pi * burst.mhz * standard.active_us * ((bounds[:-1] + bounds[1:]) / 2 - rect.x0)
+    levels = burst.middle + burst.swing * np.sin(phase)
+    return Bars(Rect(rect.x0, rect.y0, rect.x1, rect.y1), "h", tuple(bounds), tuple(levels))
 
 
 def _grey(level: float) -> tuple[float, float, float]:
@@ -64,13 +90,7 @@ def _grey(level: float) -> tuple[float, float, float]:
     return value, value, value
 
 
-def _rectangle(x0: float, y0: float, x1: float, y1: float, level: float) -> Any:
-    from matplotlib.patches import Rectangle
-
-    return Rectangle((x0, y0), x1 - x0, y1 - y0, facecolor=_grey(level), linewidth=0, antialiased=False)
-
-
-def _contours(contours: list[Any], level: float) -> Any:
+def _filled(contours: list[Any], level: float) -> Any:
     from matplotlib.patches import PathPatch
     from matplotlib.path import Path as Outline
 
@@ -78,14 +98,17 @@ def _contours(contours: list[Any], level: float) -> Any:
     return PathPatch(outline, facecolor=_grey(level), linewidth=0)
 
 
-def _slices(burst: Burst, standard: Standard) -> list[Any]:
-    """A burst as thin upright slices; it carries as many as show a smooth sine in print."""
-    rect = burst.rect
-    cycles = burst.mhz * standard.active_us * (rect.x1 - rect.x0)
-    bounds = np.linspace(rect.x0, rect.x1, int(np.ceil(cycles * _SLICES)) + 1)
-    phase = 2.0 * np.pi * burst.mhz * standard.active_us * ((bounds[:-1] + bounds[1:]) / 2 - rect.x0)
-    levels = burst.middle + burst.swing * np.sin(phase)
-    return [
-        _rectangle(a, rect.y0, b, rect.y1, float(level))
-        for a, b, level in zip(bounds[:-1], bounds[1:], levels, strict=True)
-    ]
+def _disc(disc: Disc) -> Any:
+    from matplotlib.patches import PathPatch
+    from matplotlib.path import Path as Outline
+    from matplotlib.transforms import Affine2D
+
+    # y runs down: angles go clockwise as seen, 0 to 90 degrees being the quadrant bottom right.
+    turns = {1: (0.0, 180.0), -1: (90.0, 270.0)}
+    outline = (
+        Outline.make_compound_path(*(Outline.wedge(a, a + 90.0) for a in turns[disc.quadrants]))
+        if disc.quadrants
+        else Outline.unit_circle()
+    )
+    placed = Affine2D().scale(disc.radius / ASPECT, disc.radius).translate(disc.x, disc.y)
+    return PathPatch(placed.transform_path(outline), facecolor=_grey(disc.level), linewidth=0)

@@ -1,77 +1,117 @@
 """Where the chart carries lettering, and its outlines.
 
-All lettering stands clear of what is measured: in the gap between bursts and flats, and in ground cells
-that the plan leaves out of its field patches.
+All lettering stands clear of what is measured: between bursts and flats, in the disc above and below the
+slanted bars, and in the middle of ground cells that the plan leaves out of its field patches.
 """
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from dataclasses import dataclass
 from functools import cache
 
 import numpy as np
 import numpy.typing as npt
 
-from patternscore.layout import BURST_STRIP, BURSTS_MHZ, COLUMNS, LABEL_CELLS, ROWS
+from patternscore.layout import (
+    BURST_STRIP,
+    COLUMNS,
+    DISC_CENTRE,
+    FLAT_STRIP,
+    LABEL_CELLS,
+    LIGHT,
+    ROWS,
+    STEPS_IRE,
+)
 from patternscore.plan import Plan
+from patternscore.standard import STANDARDS
 
-INK = 95.0  # IRE
-SMALL = 0.13 / ROWS  # cap heights, fractions of the picture height
-
-Label = tuple[str, float, float, float, float, str]
-
-
-def labels(plan: Plan) -> list[Label]:
-    """Words on the chart: text, x, y of the baseline, cap height, level, anchor."""
-    found = [_at(text, x, 2.075, SMALL) for text, x in _burst_labels()]
-    cells = dict(zip(("pattern", "line", "left", "right", "dark", "light"), LABEL_CELLS, strict=True))
-    found += _stacked("pattern", "score", cells["pattern"])
-    found += _stacked(plan.standard, "4:3", cells["line"])
-    found += _stacked("IRE", "0-76", cells["dark"])
-    found += _stacked("IRE", "82-100", cells["light"])
-    return found
+INK = 95.0  # IRE, on the ground
+SMALL, LARGE = 0.13, 0.23  # cap heights, cells
+NAME_OFFSET = 2.15  # cells from the middle of the disc to the middle of the words in it
+_TALL = 0.46  # cells from the first line of a list to the last
+_SIDE = 0.25  # cells from the middle of a cell to the end of words that line up at its side
 
 
-def _burst_labels() -> list[tuple[str, float]]:
-    left, words = BURST_STRIP[0], []
-    for mhz, wide in BURSTS_MHZ:
-        words.append((f"{mhz:g}" + (" MHz" if mhz < 2 else ""), left + wide / 2))
-        left += wide
-    return words
+@dataclass(frozen=True, slots=True)
+class Lettering:
+    """A word.
+
+    Attributes
+    ----------
+    x, y : float
+        Middle of the word (``align`` 0), its left (-1) or right end (1); middle of its capitals.
+    height : float
+        Of a capital, fractions of the height.
+    """
+
+    text: str
+    x: float
+    y: float
+    height: float
+    level: float
+    align: int = 0
 
 
-def _at(text: str, x: float, y: float, height: float) -> Label:
-    return text, x / COLUMNS, y / ROWS, height, INK, "middle"
+def labels(plan: Plan) -> Iterator[Lettering]:
+    """Words on the chart."""
+    cx, cy = DISC_CENTRE
+    standard = STANDARDS[plan.standard]
+    yield _word("patternscore", cx, cy - NAME_OFFSET, LARGE, LIGHT)
+    yield _word(f"{standard.name}/{standard.field_hz:.4g}", cx, cy + NAME_OFFSET, LARGE, LIGHT)
+    middle = (BURST_STRIP[3] + FLAT_STRIP[1]) / 2
+    for number, burst in enumerate(plan.bursts):
+        unit = " MHz" if number == len(plan.bursts) - 1 else ""
+        yield _word(f"{burst.mhz:g}{unit}", COLUMNS * (burst.rect.x0 + burst.rect.x1) / 2, middle)
+    black, white, tall, wide, first, last = LABEL_CELLS
+    yield from _list(black, "▴", "0", "IRE")
+    yield from _list(white, "▴", "100", "IRE")
+    yield from _list(tall, "↕", f"{standard.coded_lines / ROWS:g}", "lines")
+    yield from _list(wide, "↔", f"{standard.active_us / COLUMNS:.2f}", "µs")
+    yield from _list(first, "IRE", *(f"{row[0]} ▸" for row in STEPS_IRE), align=1)
+    yield from _list(last, "IRE", *(f"◂ {row[-1]}" for row in STEPS_IRE), align=-1)
 
 
-def _stacked(upper: str, lower: str, cell: tuple[int, int]) -> list[Label]:
-    """Two words, one over the other, in the middle of a cell."""
-    x, y = cell[0] + 0.5, cell[1] + 0.5
-    return [_at(upper, x, y - 0.07, SMALL), _at(lower, x, y + 0.21, SMALL)]
+def _word(
+    text: str, x: float, y: float, height: float = SMALL, level: float = INK, align: int = 0
+) -> Lettering:
+    return Lettering(text, x / COLUMNS, y / ROWS, height / ROWS, level, align)
+
+
+def _list(cell: tuple[int, int], *words: str, align: int = 0) -> Iterator[Lettering]:
+    """Words one below the other in the middle of a cell, or towards its side."""
+    leading = min(0.21, _TALL / (len(words) - 1))
+    for number, word in enumerate(words):
+        down = leading * (number - (len(words) - 1) / 2)
+        x, y = cell[0] + 0.5 + _SIDE * align, cell[1] + 0.5 + down
+        yield _word(word, x, y, min(SMALL, 0.75 * leading), align=align)
 
 
 @cache
-def outline(text: str) -> list[npt.NDArray[np.float64]]:
-    """Closed outlines of a word at cap height 1, x to the right from 0, y down from the baseline.
+def _glyphs(text: str) -> tuple[npt.NDArray[np.float64], ...]:
+    """Closed outlines of a word at cap height 1, x centred on 0, y down from the middle of the capitals."""
+    import matplotlib
+    from matplotlib.font_manager import FontProperties
+    from matplotlib.textpath import TextPath
+
+    font = FontProperties(fname=f"{matplotlib.get_data_path()}/fonts/ttf/DejaVuSans-Bold.ttf")
+    cap = TextPath((0, 0), "H", size=100, prop=font).get_extents().height
+    word = TextPath((0, 0), text, size=100, prop=font)
+    box = word.get_extents()
+    shift = np.array([(box.x0 + box.x1) / 2, cap / 2])
+    contours = (np.asarray(contour)[:-1] for contour in word.to_polygons(closed_only=True))
+    return tuple((contour - shift) * [1.0 / cap, -1.0 / cap] for contour in contours)
+
+
+def outlines(label: Lettering) -> list[npt.NDArray[np.float64]]:
+    """Contours of a label in picture fractions, true to shape on a 4:3 screen.
 
     Returns
     -------
     list of (n, 2) float64
-        Contours; overlapping ones are filled by the even-odd rule.
+        Corners of closed contours; holes turn the other way.
     """
-    from matplotlib.font_manager import FontProperties
-    from matplotlib.textpath import TextPath
-
-    font = FontProperties(family="DejaVu Sans", weight="bold")
-    cap = TextPath((0, 0), "H", size=100, prop=font).get_extents().height
-    contours = TextPath((0, 0), text, size=100, prop=font).to_polygons(closed_only=True)
-    return [np.asarray(contour) * [1.0 / cap, -1.0 / cap] for contour in contours]
-
-
-def placed(label: Label) -> list[npt.NDArray[np.float64]]:
-    """Contours of a label in picture fractions, true to shape on a 4:3 screen."""
-    text, x, y, height, _, anchor = label
-    contours = outline(text)
-    width = max(float(contour[:, 0].max()) for contour in contours)
-    shift = {"start": 0.0, "middle": width / 2, "end": width}[anchor]
-    scale = np.array([height * ROWS / COLUMNS, height])
-    return [(contour - [shift, 0.0]) * scale + [x, y] for contour in contours]
+    glyphs = _glyphs(label.text)
+    reach = max(float(contour[:, 0].max()) for contour in glyphs)  # half the width
+    scale = np.array([label.height * ROWS / COLUMNS, label.height])
+    return [(contour - [label.align * reach, 0.0]) * scale + [label.x, label.y] for contour in glyphs]

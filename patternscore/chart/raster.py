@@ -1,24 +1,26 @@
-"""The chart as levels: every sample is the mean of the drawing over the sample's area."""
+"""The chart as levels: every sample is the mean of the chart over the sample's area."""
 
 from __future__ import annotations
 
-from functools import cache
+from functools import lru_cache
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
-from patternscore.chart.lettering import placed
-from patternscore.chart.shapes import Box, Disc, Lettering, Polygon, Shape, shapes
+from patternscore.chart.coverage import interval_cover, polygon_cover
+from patternscore.chart.lettering import Lettering, outlines
+from patternscore.chart.shapes import Bars, Disc, Layer, Polygon, Shape, layers
 from patternscore.layout import chart_plan
-from patternscore.plan import Burst
+from patternscore.plan import Burst, Rect
 from patternscore.standard import ASPECT, Standard
 
 Levels = npt.NDArray[np.float32]
-FINE = 16  # sub-samples each way in a sample that a slanted or round outline cuts
-_BAND = 64  # rows of an outline drawn at a time, which bounds the memory
+Array = npt.NDArray[np.float64]
+Window = tuple[slice, slice]
 
 
-@cache
+@lru_cache(maxsize=8)
 def render(standard: Standard, width: int, height: int) -> Levels:
     """Draw the chart as levels.
 
@@ -32,92 +34,83 @@ def render(standard: Standard, width: int, height: int) -> Levels:
     Returns
     -------
     (height, width) float32
-        IRE, read-only. Upright outlines and bursts are exact area means; slanted and round ones are good
-        to 1/256 of a sample's area.
+        IRE, read-only: exact means over each sample's area (discs as polygons of 2880 corners). The last
+        few sizes drawn are kept.
     """
     canvas = np.zeros((height, width), dtype=np.float32)
-    for shape in shapes(chart_plan(standard)):
-        _draw(canvas, shape, standard)
+    for layer in layers(chart_plan(standard)):
+        _draw(canvas, layer, standard)
+    np.clip(canvas, 0.0, 100.0, out=canvas)  # rounding leaves a hair below black
     canvas.flags.writeable = False
     return canvas
 
 
-def _draw(canvas: Levels, shape: Shape, standard: Standard) -> None:
+def _draw(canvas: Levels, layer: Layer, standard: Standard) -> None:
+    """Lay a layer over what is there; samples that shapes share get the right part of each."""
+    drawn = [_shape(shape, canvas.shape[1], canvas.shape[0], standard) for shape in layer]
+    before = [canvas[window].copy() for window, _, _ in drawn]
+    for (window, cover, level), under in zip(drawn, before, strict=True):
+        canvas[window] += cover * (level - under)
+
+
+def _shape(shape: Shape, width: int, height: int, standard: Standard) -> tuple[Window, Levels, Levels]:
+    """Window that a shape touches, the part of each sample that it covers there, and its mean level."""
     match shape:
-        case Box():
-            _draw_box(canvas, shape)
+        case Bars():
+            return _upright(shape.rect, shape.axis, _bars_integral(shape), width, height)
         case Burst():
-            _draw_burst(canvas, shape, standard)
+            return _upright(shape.rect, "h", _burst_integral(shape, standard), width, height)
         case Polygon():
-            _draw_outline(canvas, [np.array(shape.corners)], shape.level)
+            return _filled([np.array(shape.corners)], shape.level, width, height)
         case Disc():
-            for contour in disc_outline(shape):
-                _draw_outline(canvas, [contour], shape.level)
+            return _filled(disc_outlines(shape), shape.level, width, height)
         case Lettering():
-            label = (shape.text, shape.x, shape.y, shape.height, shape.level, shape.anchor)
-            _draw_outline(canvas, placed(label), shape.level)
+            return _filled(outlines(shape), shape.level, width, height)
 
 
-def _cover(count: int, start: float, end: float) -> tuple[slice, Levels]:
-    """Samples that an interval of fractions touches, and how much of each it covers."""
-    first, last = max(int(np.floor(start * count)), 0), min(int(np.ceil(end * count)), count)
-    index = np.arange(first, last)
-    covered = np.minimum(index + 1, end * count) - np.maximum(index, start * count)
-    return slice(first, last), np.clip(covered, 0.0, 1.0).astype(np.float32)
+def _bars_integral(bars: Bars) -> Any:
+    """Integral of the level over the position, as a function of the position."""
+    bounds = np.array(bars.bounds)
+    total = np.concatenate([[0.0], np.cumsum(np.diff(bounds) * bars.levels)])
+    return lambda position: np.interp(position, bounds, total)
 
 
-def _blend(part: Levels, cover: Levels, level: Levels | float) -> None:
-    part += cover * (level - part)
-
-
-def _draw_box(canvas: Levels, box: Box) -> None:
-    rows, down = _cover(canvas.shape[0], box.rect.y0, box.rect.y1)
-    columns, along = _cover(canvas.shape[1], box.rect.x0, box.rect.x1)
-    _blend(canvas[rows, columns], np.outer(down, along), box.level)
-
-
-def _draw_burst(canvas: Levels, burst: Burst, standard: Standard) -> None:
-    rows, down = _cover(canvas.shape[0], burst.rect.y0, burst.rect.y1)
-    columns, along = _cover(canvas.shape[1], burst.rect.x0, burst.rect.x1)
+def _burst_integral(burst: Burst, standard: Standard) -> Any:
     pulse = 2.0 * np.pi * burst.mhz * standard.active_us  # radians per picture width
-    bounds = np.clip(
-        np.arange(columns.start, columns.stop + 1) / canvas.shape[1], burst.rect.x0, burst.rect.x1
+    return lambda x: burst.middle * x - burst.swing / pulse * np.cos(pulse * (x - burst.rect.x0))
+
+
+def _upright(rect: Rect, axis: str, integral: Any, width: int, height: int) -> tuple[Window, Levels, Levels]:
+    """Coverage and mean level of an upright rectangle whose level changes along one axis."""
+    rows, down = interval_cover(height, rect.y0, rect.y1)
+    columns, along = interval_cover(width, rect.x0, rect.x1)
+    count, span, part, low, high = (
+        (width, columns, along, rect.x0, rect.x1) if axis == "h" else (height, rows, down, rect.y0, rect.y1)
     )
-    integral = -np.cos(pulse * (bounds - burst.rect.x0)) / pulse
-    with np.errstate(invalid="ignore", divide="ignore"):
-        mean = np.where(along > 0, np.diff(integral) * canvas.shape[1] / along, 0.0)
-    level = (burst.middle + burst.swing * mean).astype(np.float32)
-    _blend(canvas[rows, columns], np.outer(down, along), level[None, :])
+    bounds = np.clip(np.arange(span.start, span.stop + 1) / count, low, high)
+    mean = np.diff(integral(bounds)) * count / np.maximum(part, 1e-9)
+    level = (mean[None, :] if axis == "h" else mean[:, None]).astype(np.float32)
+    return (rows, columns), np.outer(down, along).astype(np.float32), level
 
 
-def disc_outline(disc: Disc, points: int = 720) -> list[npt.NDArray[np.float64]]:
+def _filled(contours: list[Array], level: float, width: int, height: int) -> tuple[Window, Levels, Levels]:
+    """Coverage of closed contours of one level."""
+    size = np.array([width, height])
+    corners = np.concatenate(contours) * size
+    (x0, y0), (x1, y1) = np.floor(corners.min(0)).astype(int), np.ceil(corners.max(0)).astype(int)
+    cover = polygon_cover([contour * size - [x0, y0] for contour in contours], x1 - x0, y1 - y0)
+    return (slice(y0, y1), slice(x0, x1)), cover.astype(np.float32), np.float32(level).reshape(1, 1)
+
+
+def disc_outlines(disc: Disc, points: int = 2880) -> list[Array]:
     """Contours of a disc, or of two of its quadrants, as polygons of the same area."""
     turns = {0: [(0.0, 1.0)], 1: [(0.5, 0.75), (0.0, 0.25)], -1: [(0.25, 0.5), (0.75, 1.0)]}[disc.quadrants]
+    # A chord polygon loses area; a slightly larger radius gives it back.
+    radius = disc.radius / np.sqrt(np.sinc(2.0 / points))
     contours = []
     for start, end in turns:
         angle = 2.0 * np.pi * np.linspace(start, end, round(points * (end - start)) + 1)
-        # A chord polygon loses area; a slightly larger radius gives it back.
-        radius = disc.radius / np.sqrt(np.sinc(2.0 / points))
         rim = np.stack([np.cos(angle) / ASPECT, np.sin(angle)], 1) * radius
-        contour = rim if end - start == 1.0 else np.vstack([[0.0, 0.0], rim])
+        contour = rim[:-1] if disc.quadrants == 0 else np.vstack([[0.0, 0.0], rim])
         contours.append(contour + [disc.x, disc.y])
     return contours
-
-
-def _draw_outline(canvas: Levels, contours: list[npt.NDArray[np.float64]], level: float) -> None:
-    """Fill contours (even-odd) by sub-sampling; whole rows of samples at a time."""
-    import cv2
-
-    height, width = canvas.shape
-    corners = np.concatenate(contours)
-    low = np.floor(corners.min(0) * [width, height]).astype(int)
-    high = np.ceil(corners.max(0) * [width, height]).astype(int)
-    x0, x1 = max(low[0], 0), min(high[0], width)
-    for y0 in range(max(low[1], 0), min(high[1], height), _BAND):
-        y1 = min(y0 + _BAND, high[1], height)
-        mask = np.zeros(((y1 - y0) * FINE, (x1 - x0) * FINE), dtype=np.uint8)
-        # Sub-sample centres lie at whole numbers for OpenCV: shift by half a sub-sample; 8 bits of fraction.
-        scaled = [(c * [width, height] - [x0, y0]) * FINE - 0.5 for c in contours]
-        cv2.fillPoly(mask, [np.round(c * 256).astype(np.int32) for c in scaled], 255, cv2.LINE_8, 8)
-        cover = cv2.resize(mask, (x1 - x0, y1 - y0), interpolation=cv2.INTER_AREA)
-        _blend(canvas[y0:y1, x0:x1], cover.astype(np.float32) / 255.0, level)

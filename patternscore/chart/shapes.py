@@ -1,30 +1,38 @@
-"""The chart as a list of shapes, drawn one over the other; raster and vector output share it.
+"""The chart as layers of shapes, drawn one over the other; levels and drawings share them.
 
-Coordinates are picture fractions, levels IRE.
+Coordinates are picture fractions, levels IRE. Shapes of one layer do not overlap, so that the mean level of
+a sample on which several of them meet is exact too.
 """
 
 from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from itertools import pairwise
+from typing import Literal
 
 from patternscore import layout
-from patternscore.chart.lettering import labels
+from patternscore.chart.lettering import Lettering, labels
 from patternscore.layout import COLUMNS, DARK, GROUND, LIGHT, ROWS, SLANT
-from patternscore.plan import Burst, Plan, Point, Rect
+from patternscore.plan import Burst, Patch, Plan, Point, Rect, Ruler
 
 
 @dataclass(frozen=True, slots=True)
-class Box:
-    """An upright rectangle of one level."""
+class Bars:
+    """Bars of one level each, side by side along x (axis "h") or y ("v").
+
+    ``bounds`` are the n + 1 positions along that axis, from one side of ``rect`` to the other.
+    """
 
     rect: Rect
-    level: float
+    axis: Literal["h", "v"]
+    bounds: tuple[float, ...]
+    levels: tuple[float, ...]
 
 
 @dataclass(frozen=True, slots=True)
 class Polygon:
-    """A convex polygon of one level, corners clockwise as seen."""
+    """A polygon of one level."""
 
     corners: tuple[Point, ...]
     level: float
@@ -45,72 +53,74 @@ class Disc:
     quadrants: int = 0
 
 
-@dataclass(frozen=True, slots=True)
-class Lettering:
-    """A word: its baseline starts (anchor "start") or is centred ("middle") or ends ("end") at (x, y)."""
-
-    text: str
-    x: float
-    y: float
-    height: float
-    level: float
-    anchor: str = "start"
+Shape = Bars | Polygon | Disc | Burst | Lettering
+Layer = tuple[Shape, ...]
 
 
-Shape = Box | Polygon | Disc | Burst | Lettering
+def layers(plan: Plan) -> Iterator[Layer]:
+    """All layers of the package's chart, back to front."""
+    yield (_box(Rect(0.0, 0.0, 1.0, 1.0), GROUND),)
+    yield from _crosshatch(plan)
+    yield _blocks()
+    yield _light_bars()
+    yield plan.bursts
+    yield tuple(_rows(plan.flats)) + tuple(_rows(plan.steps))
+    yield tuple(_marks(plan))
+    yield tuple(_ruler(ruler) for ruler in plan.rulers)
+    yield tuple(labels(plan))
+
+
+def _box(rect: Rect, level: float) -> Bars:
+    return Bars(rect, "h", (rect.x0, rect.x1), (level,))
 
 
 def _cells(*points: Point) -> tuple[Point, ...]:
     return tuple((x / COLUMNS, y / ROWS) for x, y in points)
 
 
-def _box(block: tuple[float, float, float, float], level: float) -> Box:
+def _block(block: tuple[float, float, float, float], level: float) -> Bars:
     (x0, y0), (x1, y1) = _cells(block[:2], block[2:])
-    return Box(Rect(x0, y0, x1, y1), level)
+    return _box(Rect(x0, y0, x1, y1), level)
 
 
-def shapes(plan: Plan) -> Iterator[Shape]:
-    """All shapes of the package's chart, back to front."""
-    yield Box(Rect(0.0, 0.0, 1.0, 1.0), GROUND)
-    yield from _crosshatch(plan)
-    yield from _bars()
-    for side, block in zip((-1, 1), layout.SIDE_BLOCKS, strict=True):
-        yield from _bands(side, block)
-    for place, block in layout.CORNER_BLOCKS.items():
-        yield _box(block, DARK)
-        yield Polygon(_cells(*layout.square_corners(place)), LIGHT)
-    yield _box(layout.TOP_BLOCK, GROUND)
-    yield from plan.bursts
-    for patch in (*plan.flats, *plan.steps):
-        yield Box(patch.rect, patch.level)
-    for mark in plan.marks:
-        yield Disc(mark.x, mark.y, mark.radius, mark.light, mark.hand)
-        yield Disc(mark.x, mark.y, mark.radius, mark.dark, -mark.hand)
-    yield from _rulers(plan)
-    yield from (Lettering(*label) for label in labels(plan))
-
-
-def _crosshatch(plan: Plan) -> Iterator[Box]:
+def _crosshatch(plan: Plan) -> Iterator[Layer]:
     grid = plan.grid
     assert grid is not None
     half_y, half_x = grid.thickness / 2, grid.thickness * ROWS / COLUMNS / 2
     left, right = grid.columns[0] - half_x, grid.columns[-1] + half_x
     top, bottom = grid.rows[0] - half_y, grid.rows[-1] + half_y
-    for x in grid.columns:
-        yield Box(Rect(x - half_x, top, x + half_x, bottom), grid.line)
-    for y in grid.rows:
-        yield Box(Rect(left, y - half_y, right, y + half_y), grid.line)
+    yield tuple(_box(Rect(x - half_x, top, x + half_x, bottom), grid.line) for x in grid.columns)
+    yield tuple(_box(Rect(left, y - half_y, right, y + half_y), grid.line) for y in grid.rows)
 
 
-def _bars() -> Iterator[Shape]:
-    """Two slanted bars in the disc at the centre."""
+def _blocks() -> Layer:
+    """What lies over the crosshatch: the disc, the blocks, the ground of bursts and flats."""
     x, y, radius = layout.circle()
-    yield Disc(x, y, radius, DARK)
+    corners = (_block(block, DARK) for block in layout.CORNER_BLOCKS.values())
+    bands = (
+        band for side, block in zip((-1, 1), layout.SIDE_BLOCKS, strict=True) for band in _bands(side, block)
+    )
+    return Disc(x, y, radius, DARK), *corners, *bands, _block(layout.TOP_BLOCK, GROUND)
+
+
+def _bands(side: int, block: tuple[float, float, float, float]) -> Iterator[Shape]:
+    """Near-horizontal edges of a side block, dark uppermost."""
+    x0, y0, x1, y1 = block
+    lean, middle = side * SLANT * (x1 - x0) / 2, (y0 + y1) / 2
+    inner = [(middle + offset + lean, middle + offset - lean) for offset in layout.SIDE_OFFSETS]
+    bounds = [(y0, y0), *inner, (y1, y1)]
+    for number, ((left, right), (low_left, low_right)) in enumerate(pairwise(bounds)):
+        corners = _cells((x0, left), (x1, right), (x1, low_right), (x0, low_left))
+        yield Polygon(corners, LIGHT if number % 2 else DARK)
+
+
+def _light_bars() -> Layer:
+    """Slanted bars in the disc and slanted squares in the corner blocks."""
     cx, cy = layout.DISC_CENTRE
     high = layout.BAR_HALF
     lean = SLANT * high
-    for left, right in zip(layout.BAR_OFFSETS[::2], layout.BAR_OFFSETS[1::2], strict=True):
-        yield Polygon(
+    bars = (
+        Polygon(
             _cells(
                 (cx + left + lean, cy - high),
                 (cx + right + lean, cy - high),
@@ -119,27 +129,31 @@ def _bars() -> Iterator[Shape]:
             ),
             LIGHT,
         )
-
-
-def _bands(side: int, block: tuple[float, float, float, float]) -> Iterator[Shape]:
-    """Near-horizontal edges of a side block."""
-    x0, y0, x1, y1 = block
-    yield _box(block, DARK)
-    lean, middle = side * SLANT * (x1 - x0) / 2, (y0 + y1) / 2
-    first, second, third = (middle + offset for offset in layout.SIDE_OFFSETS)
-    yield Polygon(
-        _cells((x0, first + lean), (x1, first - lean), (x1, second - lean), (x0, second + lean)), LIGHT
+        for left, right in zip(layout.BAR_OFFSETS[::2], layout.BAR_OFFSETS[1::2], strict=True)
     )
-    yield Polygon(_cells((x0, third + lean), (x1, third - lean), (x1, y1), (x0, y1)), LIGHT)
+    squares = (Polygon(_cells(*layout.square_corners(place)), LIGHT) for place in layout.CORNER_BLOCKS)
+    return *bars, *squares
 
 
-def _rulers(plan: Plan) -> Iterator[Box]:
-    for ruler in plan.rulers:
-        low, high = ruler.band
-        bars = zip(ruler.boundaries[:-1], ruler.boundaries[1:], ruler.bits, strict=True)
-        for start, end, light in bars:
-            level = ruler.light if light else ruler.dark
-            if ruler.side in ("top", "bottom"):
-                yield Box(Rect(start, low, end, high), level)
-            else:
-                yield Box(Rect(low, start, high, end), level)
+def _rows(patches: tuple[Patch, ...]) -> Iterator[Bars]:
+    """Patches of a strip that lie side by side, as bars."""
+    rows: dict[tuple[float, float], list[Patch]] = {}
+    for patch in patches:
+        rows.setdefault((patch.rect.y0, patch.rect.y1), []).append(patch)
+    for (y0, y1), row in rows.items():
+        bounds = (*(patch.rect.x0 for patch in row), row[-1].rect.x1)
+        yield Bars(Rect(bounds[0], y0, bounds[-1], y1), "h", bounds, tuple(patch.level for patch in row))
+
+
+def _marks(plan: Plan) -> Iterator[Disc]:
+    for mark in plan.marks:
+        yield Disc(mark.x, mark.y, mark.radius, mark.light, mark.hand)
+        yield Disc(mark.x, mark.y, mark.radius, mark.dark, -mark.hand)
+
+
+def _ruler(ruler: Ruler) -> Bars:
+    levels = tuple(ruler.light if light else ruler.dark for light in ruler.bits)
+    (low, high), (start, end) = ruler.band, (ruler.boundaries[0], ruler.boundaries[-1])
+    if ruler.side in ("top", "bottom"):
+        return Bars(Rect(start, low, end, high), "h", ruler.boundaries, levels)
+    return Bars(Rect(low, start, high, end), "v", ruler.boundaries, levels)
