@@ -60,14 +60,8 @@ def _peaking(seen: _Seen) -> str | None:
     if seen.over("overshoot", 10.0):
         return f"Overshoot is {overshoot:.0f} %{at}: peaking is past its optimum."
     half = seen.value("mtf50_h")
-    if (
-        seen.under("overshoot", 2.0)
-        and half is not None
-        and seen.under("mtf50_h", 0.7 * seen.standard.luma_mhz)
-    ):
-        return (
-            f"The response falls to half at {half:.2f} MHz with no overshoot: there is room for more peaking."
-        )
+    if seen.under("overshoot", 2.0) and half is not None and seen.under("mtf50_h", 0.7 * seen.standard.luma_mhz):
+        return f"The response falls to half at {half:.2f} MHz with no overshoot: there is room for more peaking."
     return None
 
 
@@ -82,7 +76,7 @@ def _preshoot(seen: _Seen) -> str | None:
     if before is None or after is None or not seen.over("preshoot", 5.0) or not seen.over("overshoot", 5.0):
         return None
     if abs(before - after) < 0.25 * max(before, after):
-        return f"Edges overshoot alike before ({before:.0f} %) and after ({after:.0f} %): a symmetrical filter or sharpener."
+        return f"Edges overshoot alike before ({before:.0f} %) and after ({after:.0f} %): a filter or a sharpener."
     return None
 
 
@@ -120,7 +114,8 @@ def _speed(seen: _Seen) -> str | None:
             return f"The outermost part at the {side} is squeezed by {value:.0f} %: adjust linearity, or amplitude."
     for letter, scan in (("h", "line"), ("v", "field")):
         if seen.over(f"linearity_{letter}", 3.0):
-            return f"{scan.capitalize()} scan speed varies by +-{seen.value(f'linearity_{letter}'):.1f} %: adjust {scan} linearity."
+            value = seen.value(f"linearity_{letter}")
+            return f"{scan.capitalize()} scan speed varies by +-{value:.1f} %: adjust {scan} linearity."
     return None
 
 
@@ -149,13 +144,14 @@ def _turn(seen: _Seen) -> str | None:
 
 def _corners(seen: _Seen) -> str | None:
     if seen.over("corner_loss", 15.0):
-        return f"The corners resolve {seen.value('corner_loss'):.0f} % less than the centre: check focus and its correction."
+        return f"The corners resolve {seen.value('corner_loss'):.0f} % less than the centre: check focus."
     return None
 
 
 def _noise(seen: _Seen) -> str | None:
     if seen.under("noise", 36.0):
-        return f"Noise is {seen.value('noise'):.0f} dB below white: average several grabs (--together) for finer changes."
+        value = seen.value("noise")
+        return f"Noise is {value:.0f} dB below white: average several grabs (--together) for finer changes."
     return None
 
 

@@ -48,9 +48,7 @@ def grab(chain: Chain, picture: npt.NDArray[Any] | None = None, seed: int = 0) -
     """
     random = np.random.default_rng(seed)
     shifts = _shifts(chain, random)
-    steady = replace(
-        chain, noise_db=None, jitter_ns=0.0, wander_ns=0.0, bounce_percent=0.0, bits=None, levels="video"
-    )
+    steady = replace(chain, noise_db=None, jitter_ns=0.0, wander_ns=0.0, bounce_percent=0.0, bits=None, levels="video")
     luma: npt.NDArray[Any] = _sample(chain, _spectrum(steady, _Picture(picture)), shifts)
     if chain.bounce_percent:
         luma = luma * np.float32(1.0 + random.normal(0.0, chain.bounce_percent / 100.0))
@@ -132,16 +130,14 @@ def _scanned(chain: Chain, picture: Lines, times: npt.NDArray[Any], lines: npt.N
     across = chain.spot_us / chain.standard.active_us * width
     down = chain.spot_lines / chain.lines * height
     if across > 0 or down > 0:
-        picture = cv2.GaussianBlur(
+        picture = cv2.GaussianBlur(  # type: ignore[assignment]  # float32 in, float32 out
             picture, (0, 0), sigmaX=max(across, 1e-3), sigmaY=max(down, 1e-3), borderType=cv2.BORDER_REPLICATE
         )
     x, y = picture_points(chain, times, lines)
     outside = (x < 0) | (x > 1) | (y < 0) | (y > 1)
     columns = (x * width - 0.5).astype(np.float32)
     rows = (y * height - 0.5).astype(np.float32)
-    levels: npt.NDArray[Any] = cv2.remap(
-        picture, columns, rows, cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE
-    )
+    levels: npt.NDArray[Any] = cv2.remap(picture, columns, rows, cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
     levels[outside] = 0.0
     if chain.gamma != 1.0:
         levels = 100.0 * np.clip(levels / 100.0, 0.0, None) ** np.float32(chain.gamma)
@@ -220,6 +216,4 @@ def _coded(chain: Chain, luma: Lines) -> Frame:
         return Frame(luma, chain.standard, chain.sample_rate, name="grab", levels=chain.levels, code_step=0.0)
     top = 2**chain.bits - 1
     codes = np.clip(np.rint(code_from_ire(luma, chain.levels, chain.bits)), 0, top).astype(np.uint16)
-    return frame_from_codes(
-        codes, chain.standard, chain.sample_rate, levels=chain.levels, bits=chain.bits, name="grab"
-    )
+    return frame_from_codes(codes, chain.standard, chain.sample_rate, levels=chain.levels, bits=chain.bits, name="grab")

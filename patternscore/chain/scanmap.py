@@ -76,6 +76,4 @@ def picture_points(chain: Chain, times: Map, lines: Map) -> tuple[Map, Map]:
     down = chain.sweep_v.position(lines, raster.height_lines).astype(np.float32)
     if has_distortion(chain):
         return _undistorted_raster(chain, along, down)
-    return np.broadcast_to(along, (len(lines), len(times))), np.broadcast_to(
-        down[:, None], (len(lines), len(times))
-    )
+    return np.broadcast_to(along, (len(lines), len(times))), np.broadcast_to(down[:, None], (len(lines), len(times)))

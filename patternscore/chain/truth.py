@@ -125,9 +125,7 @@ def _geometry(chain: Chain) -> dict[str, float]:
     return {name: float(getattr(chain, name)) for name in names}
 
 
-def _sweep_truth(
-    sweep: Sweep, duration: float, names: tuple[str, str, str, str], parts: int
-) -> dict[str, float]:
+def _sweep_truth(sweep: Sweep, duration: float, names: tuple[str, str, str, str], parts: int) -> dict[str, float]:
     start, end, letter, size = names
     times = np.linspace(sweep.fold_start, duration - sweep.fold_end, 40_001)
     place = sweep.position(times, duration)

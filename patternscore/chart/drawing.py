@@ -22,6 +22,21 @@ _SLICES = 24  # slices of one level that stand for a cycle of a burst
 def write_drawing(path: Path, standard: Standard) -> None:
     """Write the chart as SVG or PDF; the same chart gives the same bytes."""
     import matplotlib
+
+    kind = path.suffix.lower().lstrip(".")
+    dates = {"Date": None} if kind == "svg" else {"CreationDate": None, "ModDate": None}
+    title = {"Title": f"patternscore chart {standard.name}"}
+    # Own settings of the user's must not change the page or the outlines.
+    fixed = {"svg.hashsalt": "patternscore", "savefig.bbox": "standard", "path.simplify": False}
+    with matplotlib.rc_context(fixed):
+        try:
+            drawn(standard).savefig(path, format=kind, metadata=title | dates)
+        except OSError as error:
+            raise UsageError(f"{path}: cannot be written ({error.strerror}); name another place") from None
+
+
+def drawn(standard: Standard) -> Any:
+    """Give the chart as a Matplotlib figure that holds exactly the picture, 4:3."""
     from matplotlib.backends.backend_agg import FigureCanvasAgg
     from matplotlib.figure import Figure
 
@@ -35,14 +50,7 @@ def write_drawing(path: Path, standard: Standard) -> None:
         for shape in layer:
             for artist in _artists(shape, standard):
                 axes.add_patch(artist)
-    kind = path.suffix.lower().lstrip(".")
-    dates = {"Date": None} if kind == "svg" else {"CreationDate": None, "ModDate": None}
-    title = {"Title": f"patternscore chart {standard.name}"}
-    with matplotlib.rc_context({"svg.hashsalt": "patternscore"}):
-        try:
-            figure.savefig(path, format=kind, metadata=title | dates)
-        except OSError as error:
-            raise UsageError(f"{path}: cannot be written ({error.strerror}); name another place") from None
+    return figure
 
 
 def _artists(shape: Shape, standard: Standard) -> Iterator[Any]:

@@ -43,9 +43,7 @@ def write_chart(path: Path | str, standard: Standard, width: int, height: int, b
         _write_raster(path, standard, width, height, bits)
     else:
         known = ", ".join(RASTER_SUFFIXES + DRAWING_SUFFIXES)
-        raise UsageError(
-            f"{path.name}: {suffix or 'no ending'} is no format of a chart; end the name in {known}"
-        )
+        raise UsageError(f"{path.name}: {suffix or 'no ending'} is no format of a chart; end the name in {known}")
 
 
 def _write_raster(path: Path, standard: Standard, width: int, height: int, bits: int) -> None:
@@ -54,20 +52,15 @@ def _write_raster(path: Path, standard: Standard, width: int, height: int, bits:
     if bits not in (8, 16):
         raise UsageError(f"{path.name}: {bits} bits cannot be written; ask for 8 or 16")
     if width < 64 or height < 48 or width * height > LARGEST:
-        raise UsageError(
-            f"{path.name}: {width} x {height} is no size for a chart; ask for 64 x 48 to 64 megapixels"
-        )
+        raise UsageError(f"{path.name}: {width} x {height} is no size for a chart; ask for 64 x 48 to 64 megapixels")
     full = 2**bits - 1
     codes = np.rint(render(standard, width, height) * np.float32(full / 100.0))
-    done, data = cv2.imencode(suffix_of(path), codes.astype(np.uint16 if bits == 16 else np.uint8))
+    done, data = cv2.imencode(
+        ".png" if path.suffix.lower() == ".png" else ".tiff", codes.astype(np.uint16 if bits == 16 else np.uint8)
+    )
     if not done:
         raise UsageError(f"{path.name}: the picture could not be encoded; try another format")
     try:
         path.write_bytes(data.tobytes())
     except OSError as error:
         raise UsageError(f"{path}: cannot be written ({error.strerror}); name another place") from None
-
-
-def suffix_of(path: Path) -> str:
-    """File ending that the encoder knows."""
-    return ".tiff" if path.suffix.lower().startswith(".tif") else ".png"

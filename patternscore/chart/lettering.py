@@ -72,9 +72,7 @@ def labels(plan: Plan) -> Iterator[Lettering]:
     yield from _list(last, "IRE", *(f"◂ {row[-1]}" for row in STEPS_IRE), align=-1)
 
 
-def _word(
-    text: str, x: float, y: float, height: float = SMALL, level: float = INK, align: int = 0
-) -> Lettering:
+def _word(text: str, x: float, y: float, height: float = SMALL, level: float = INK, align: int = 0) -> Lettering:
     return Lettering(text, x / COLUMNS, y / ROWS, height / ROWS, level, align)
 
 

@@ -97,9 +97,7 @@ def _blocks() -> Layer:
     """What lies over the crosshatch: the disc, the blocks, the ground of bursts and flats."""
     x, y, radius = layout.circle()
     corners = (_block(block, DARK) for block in layout.CORNER_BLOCKS.values())
-    bands = (
-        band for side, block in zip((-1, 1), layout.SIDE_BLOCKS, strict=True) for band in _bands(side, block)
-    )
+    bands = (band for side, block in zip((-1, 1), layout.SIDE_BLOCKS, strict=True) for band in _bands(side, block))
     return Disc(x, y, radius, DARK), *corners, *bands, _block(layout.TOP_BLOCK, GROUND)
 
 

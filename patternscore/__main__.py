@@ -1,0 +1,5 @@
+"""Runs the command: ``python -m patternscore``."""
+
+from patternscore.cli import main
+
+main()

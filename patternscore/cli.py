@@ -1,0 +1,291 @@
+"""The command line: reads what a person typed, calls the package, prints, and sets the exit status."""
+
+from __future__ import annotations
+
+import os
+import sys
+from pathlib import Path
+from typing import Any, NoReturn
+
+import click
+
+from patternscore.errors import PatternscoreError, UnscorableFrame, UsageError
+
+DONE, UNSCORED, WRONG_USE, UNDER = 0, 1, 2, 3
+CAUTION = (
+    "Tubes and their supplies hold lethal voltages, also unplugged: insulated trimming tool, one hand, discharge "
+    "first, isolation transformer, never alone; local codes and licensed practice come first."
+)
+
+
+@click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100}, epilog=CAUTION)
+@click.version_option(package_name="patternscore", message="%(prog)s %(version)s")
+def commands() -> None:
+    """Score grabbed frames of a test pattern: resolution, ringing, fold-back, geometry, levels, stability."""
+
+
+def _reading_options(command: Any) -> Any:
+    """Options that say how frames are to be read and marked."""
+    for option in (
+        click.option("--levels", type=click.Choice(["video", "full"]), default="video", show_default=True,
+                     help="Codes of black and white: 16 and 235, or the whole range."),
+        click.option("--sample-rate", type=float, metavar="MHZ", help="Sample clock, where the size does not tell it."),
+        click.option("--standard", type=click.Choice(["525", "625"]), help="Where the size does not tell it."),
+        click.option("--limits", type=click.Path(path_type=Path), metavar="FILE", help="TOML that replaces limits."),
+        click.option("--plan", type=click.Path(path_type=Path), metavar="FILE", help="TOML plan of the pattern."),
+    ):  # fmt: skip
+        command = option(command)
+    return command
+
+
+def _reader(
+    standard: str | None, sample_rate: float | None, levels: str, limits: Path | None, plan: Path | None
+) -> Any:
+    from patternscore.compare import Reader
+    from patternscore.limits import read_limits, shipped_limits
+    from patternscore.load import standard_of
+
+    if sample_rate is not None:
+        standard_of(720, 480, "", standard, sample_rate)
+    found_plan = None
+    if plan is not None:
+        from patternscore.planfile import read_plan
+
+        found_plan = read_plan(plan)
+    return Reader(
+        standard,
+        sample_rate,
+        "full" if levels == "full" else "video",
+        found_plan,
+        shipped_limits() if limits is None else read_limits(limits),
+    )
+
+
+@commands.command(name="score")
+@click.argument("frames", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="FRAME...")
+@click.option("--json", "as_json", is_flag=True, help="Print one JSON object a frame instead of the card.")
+@click.option(
+    "--picture", type=click.Path(path_type=Path), metavar="PNG", help="Draw what was measured where (one frame)."
+)
+@click.option("--together", is_flag=True, help="Take all files and pages as grabs of one picture: score their average.")
+@click.option("--fail-under", type=click.FloatRange(0, 100), metavar="N", help="Exit with 3 when a score is under N.")
+@_reading_options
+def score_command(
+    frames: tuple[Path, ...],
+    as_json: bool,
+    picture: Path | None,
+    together: bool,
+    fail_under: float | None,
+    **reading: Any,
+) -> int:
+    """Measure frames and print their cards."""
+    reader = _reader(**reading)
+    if picture is not None and len(frames) > 1 and not together:
+        raise UsageError("--picture draws one frame: score one, or several --together")
+    status, lowest = DONE, 100.0
+    for group in [list(frames)] if together else [[path] for path in frames]:
+        try:
+            card = _score_group(group, reader, picture, together)
+        except UnscorableFrame as error:
+            _complain(str(error))
+            status = UNSCORED
+            continue
+        except UsageError as error:
+            if len(frames) == 1 or together:
+                raise
+            _complain(str(error))
+            status = UNSCORED
+            continue
+        _show(card, as_json)
+        lowest = min(lowest, card.score if card.score is not None else 0.0)
+    if status == DONE and fail_under is not None and lowest < fail_under:
+        return UNDER
+    return status
+
+
+def _score_group(paths: list[Path], reader: Any, picture: Path | None, together: bool) -> Any:
+    from patternscore.load import load_frames
+    from patternscore.score import score_frame, score_together
+
+    told = {"standard": reader.standard, "sample_rate": reader.sample_rate, "levels": reader.levels}
+    if together:
+        grabs = [frame for path in paths for frame in load_frames(path, **told)]
+        if len(grabs) < 2:
+            raise UsageError("--together needs several frames: name several files, or one of several pages")
+        scored = score_together(grabs, reader.plan, limits=reader.limits)
+    else:
+        frame = load_frames(paths[0], **told, most=1)[0]
+        scored = score_frame(frame, reader.plan, limits=reader.limits)
+    if picture is not None:
+        from patternscore.report.picture import card_picture
+
+        card_picture(scored, picture)
+    return scored.card
+
+
+def _show(card: Any, as_json: bool) -> None:
+    if as_json:
+        click.echo(card.to_json())
+        return
+    from patternscore.report.text import print_card
+
+    print_card(card, _console())
+
+
+def _console(stderr: bool = False) -> Any:
+    """Console whose colours and width suit where it writes: 80 columns where that is no terminal."""
+    from rich.console import Console
+
+    stream = sys.stderr if stderr else sys.stdout
+    width = None if stream.isatty() else int(os.environ.get("COLUMNS", "80") or 80)
+    return Console(file=stream, width=width, highlight=False, soft_wrap=False)
+
+
+@commands.command(name="compare")
+@click.argument("folder", type=click.Path(path_type=Path))
+@click.option(
+    "--by", metavar="KEY", default="name", show_default=True, help="Order of rows: name, setting, score or a reading."
+)
+@click.option("--csv", "csv_file", type=click.Path(path_type=Path), metavar="FILE", help="Write all readings as CSV.")
+@click.option(
+    "--json",
+    "json_file",
+    type=click.Path(path_type=Path),
+    metavar="FILE",
+    help="Write the cards as JSON lines (- prints them).",
+)
+@click.option("--picture", type=click.Path(path_type=Path), metavar="PNG", help="Draw trend curves over the settings.")
+@click.option("--jobs", type=click.IntRange(1), metavar="N", help="Processes to use; all cores where left out.")
+@_reading_options
+def compare_command(
+    folder: Path,
+    by: str,
+    csv_file: Path | None,
+    json_file: Path | None,
+    picture: Path | None,
+    jobs: int | None,
+    **reading: Any,
+) -> int:
+    """Score all frames of a folder and lay them side by side."""
+    from patternscore.compare import sorted_by
+    from patternscore.load import list_frames
+
+    _check_order(by)
+    reader = _reader(**reading)
+    paths = list_frames(folder)
+    outcomes = _with_progress(paths, reader, jobs)
+    cards = sorted_by([outcome.card for outcome in outcomes if outcome.card is not None], by, reader.limits)
+    failed = [(outcome.name, outcome.reason) for outcome in outcomes if outcome.card is None]
+    for _, reason in failed:
+        _complain(reason)
+    if str(json_file) == "-":
+        for card in cards:
+            click.echo(card.to_json())
+    else:
+        from patternscore.report.table import print_comparison
+
+        first = by if by not in ("name", "setting", "score") else None
+        print_comparison(cards, [], reader.limits, _console(), first)
+        if json_file is not None:
+            _write(json_file, "".join(card.to_json() + "\n" for card in cards))
+    if csv_file is not None:
+        _write_csv(csv_file, cards)
+    if picture is not None and cards:
+        from patternscore.report.trends import trend_picture
+
+        trend_picture(cards, picture, reader.limits)
+    return UNSCORED if failed else DONE
+
+
+def _check_order(by: str) -> None:
+    from difflib import get_close_matches
+
+    from patternscore.keys import KEYS
+
+    known = [*KEYS, "name", "setting", "score"]
+    if by not in known:
+        close = get_close_matches(by, known, n=1, cutoff=0.4)
+        raise UsageError(f"--by {by}: no such reading; " + (f"did you mean {close[0]}?" if close else "see the README"))
+
+
+def _with_progress(paths: list[Path], reader: Any, jobs: int | None) -> Any:
+    from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
+
+    from patternscore.compare import score_files
+
+    columns = (TextColumn("scoring"), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn())
+    with Progress(*columns, console=_console(stderr=True), transient=True, disable=not sys.stderr.isatty()) as progress:
+        task = progress.add_task("", total=len(paths))
+        return score_files(paths, reader, jobs, lambda: progress.advance(task))
+
+
+def _write_csv(path: Path, cards: list[Any]) -> None:
+    import csv
+    import io
+
+    from patternscore.report.table import rows_of
+
+    text = io.StringIO()
+    head, rows = rows_of(cards)
+    writer = csv.writer(text, lineterminator="\n")
+    writer.writerow(head)
+    writer.writerows(rows)
+    _write(path, text.getvalue())
+
+
+def _write(path: Path, text: str) -> None:
+    try:
+        path.write_text(text, encoding="utf-8")
+    except OSError as error:
+        raise UsageError(f"{path}: cannot be written ({error.strerror}); name another place") from None
+
+
+@commands.command(name="chart")
+@click.argument("out", type=click.Path(path_type=Path))
+@click.option(
+    "--standard", type=click.Choice(["525", "625"]), default="525", show_default=True, help="Scanning standard."
+)
+@click.option(
+    "--size", metavar="WxH", default="5760x1920", show_default=True, help="Samples and lines of a PNG or TIFF."
+)
+@click.option("--bits", type=click.Choice(["8", "16"]), default="16", show_default=True, help="Depth of a PNG or TIFF.")
+def chart_command(out: Path, standard: str, size: str, bits: str) -> int:
+    """Draw the chart: exactly the active picture, linear in level, as PNG, TIFF, SVG or PDF."""
+    from patternscore.chart import write_chart
+    from patternscore.standard import standard_named
+
+    width, _, height = size.lower().partition("x")
+    if not (width.isdigit() and height.isdigit()):
+        raise UsageError(f"--size {size}: write it as WIDTHxHEIGHT, such as 5760x1920")
+    write_chart(out, standard_named(standard), int(width), int(height), int(bits))
+    return DONE
+
+
+def _complain(message: str) -> None:
+    click.echo(f"patternscore: {message}", err=True)
+
+
+def main() -> NoReturn:
+    """Run the command and leave with its exit status; whatever a user can cause is one line on stderr."""
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")  # small matrices: threads only cost time
+    try:
+        status = commands.main(prog_name="patternscore", standalone_mode=False)
+    except click.exceptions.Abort:
+        _complain("stopped")
+        status = 130
+    except click.ClickException as error:
+        _complain(" ".join(error.format_message().split()) + "; see --help")
+        status = WRONG_USE
+    except UnscorableFrame as error:
+        _complain(str(error))
+        status = UNSCORED
+    except PatternscoreError as error:
+        _complain(str(error))
+        status = WRONG_USE
+    except BrokenPipeError:
+        sys.stderr.close()
+        status = DONE
+    except KeyboardInterrupt:
+        _complain("stopped")
+        status = 130
+    sys.exit(status if isinstance(status, int) else DONE)

@@ -1,0 +1,147 @@
+"""Scores the frames of a folder on all cores; only cards are kept."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Iterator
+from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
+from dataclasses import dataclass
+from pathlib import Path
+
+from patternscore.card import Card
+from patternscore.errors import PatternscoreError
+from patternscore.keys import KEYS
+from patternscore.limits import Limits
+from patternscore.plan import Plan
+from patternscore.standard import Levels
+
+_POOL_FROM = 12  # fewer frames than this are done before a second process has started
+
+
+@dataclass(frozen=True, slots=True)
+class Reader:
+    """How frames are to be read and scored."""
+
+    standard: str | None = None
+    sample_rate: float | None = None
+    levels: Levels = "video"
+    plan: Plan | None = None
+    limits: Limits | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Outcome:
+    """What came of one file: a card, or the reason why there is none."""
+
+    name: str
+    card: Card | None
+    reason: str = ""
+
+
+def score_file(path: Path, reader: Reader) -> Outcome:
+    """Read and score one file; bad input becomes a reason, never an exception."""
+    from patternscore.load import load_frame
+    from patternscore.score import score
+
+    try:
+        frame = load_frame(path, standard=reader.standard, sample_rate=reader.sample_rate, levels=reader.levels)
+        return Outcome(path.name, score(frame, reader.plan, limits=reader.limits))
+    except PatternscoreError as error:
+        return Outcome(path.name, None, str(error))
+
+
+def score_files(
+    paths: list[Path], reader: Reader, jobs: int | None = None, tick: Callable[[], None] = lambda: None
+) -> list[Outcome]:
+    """Score files, several at a time; outcomes in the order of the paths.
+
+    Parameters
+    ----------
+    jobs : int, optional
+        Processes; the number of cores where left out. One process works in this one.
+    tick : callable
+        Called after each file.
+    """
+    jobs = min(jobs or available_cores(), len(paths))
+    if jobs <= 1 or len(paths) < _POOL_FROM:
+        return [_ticked(score_file(path, reader), tick) for path in paths]
+    found: dict[int, Outcome] = {}
+    for index, outcome in _pooled(paths, reader, jobs):
+        found[index] = _ticked(outcome, tick)
+    return [found[index] for index in range(len(paths))]
+
+
+def available_cores() -> int:
+    """Cores that this process may use."""
+    try:
+        return len(os.sched_getaffinity(0))
+    except AttributeError:  # not on every system
+        return os.cpu_count() or 1
+
+
+def _ticked(outcome: Outcome, tick: Callable[[], None]) -> Outcome:
+    tick()
+    return outcome
+
+
+def _pooled(paths: list[Path], reader: Reader, jobs: int) -> Iterator[tuple[int, Outcome]]:
+    """Keep a few files a process under way, so that memory does not grow with the folder."""
+    with ProcessPoolExecutor(jobs, initializer=_one_thread) as pool:
+        waiting = iter(enumerate(paths))
+        running: dict[Future[Outcome], int] = {}
+
+        def start() -> None:
+            for index, path in waiting:
+                running[pool.submit(score_file, path, reader)] = index
+                if len(running) >= 3 * jobs:
+                    return
+
+        start()
+        while running:
+            done, _ = wait(running, return_when=FIRST_COMPLETED)
+            for future in done:
+                index = running.pop(future)
+                yield index, _result(future, paths[index])
+            start()
+
+
+def _result(future: Future[Outcome], path: Path) -> Outcome:
+    error = future.exception()
+    if error is None:
+        return future.result()
+    return Outcome(path.name, None, f"{path.name}: scoring stopped ({type(error).__name__}); score it alone to see why")
+
+
+def _one_thread() -> None:
+    """A worker has one core: libraries must not start threads of their own."""
+    import cv2
+
+    cv2.setNumThreads(1)
+
+
+def sorted_by(cards: list[Card], key: str, limits: Limits) -> list[Card]:
+    """Cards in the order of a reading, best first; "score", "name" and "setting" are known too."""
+    from patternscore.load import natural
+    from patternscore.settings_in_names import setting_in_name
+
+    if key == "name":
+        return sorted(cards, key=lambda card: natural(card.name))
+    if key == "score":
+        return sorted(cards, key=lambda card: -(card.score if card.score is not None else -1.0))
+    if key == "setting":
+        settings = {card.name: setting_in_name(card.name) for card in cards}
+        return sorted(
+            cards, key=lambda card: (settings[card.name] is None, getattr(settings[card.name], "number", 0.0))
+        )
+    entry = KEYS[key]
+    limit = limits.get(key)
+
+    def worth(card: Card) -> tuple[bool, float]:
+        if key not in card:
+            return True, 0.0
+        value = card[key].value
+        if limit is not None and limit.target is not None:
+            return False, abs(value - limit.target)
+        return False, -value if entry.better == "high" else value
+
+    return sorted(cards, key=worth)
