@@ -14,8 +14,8 @@ import numpy as np
 import numpy.typing as npt
 
 from patternscore.errors import Unreadable
+from patternscore.measure.foldband import unfolded_misfit
 from patternscore.measure.foldfit import fit_fold
-from patternscore.measure.foldmodel import unfolded_misfit
 from patternscore.measure.foldview import LEAST, View
 from patternscore.reading import Estimate
 
@@ -44,13 +44,32 @@ class Fold:
     misfit: tuple[float, float] = (0.0, 0.0)
 
 
-def find_fold(view: View, edge_sigma: float) -> Fold:
+def suspect(view: View) -> float:
+    """How far the strip before the forward code departs from a scan that does not fold.
+
+    Returns
+    -------
+    float
+        rms, of the bars' contrast; there is no reason to think of a fold where it is below ``PLAIN``.
+    """
+    view = _strip(view)
+    energy = [
+        float(np.sum(unfolded_misfit(band, view.black_until)[band.t < view.certified] ** 2))
+        / max(float(np.sum(band.t < view.certified)), view.bar)
+        for band in view.bands
+    ]
+    return float(np.sqrt(np.mean(energy)))
+
+
+def find_fold(view: View, plain: float, edge_sigma: float) -> Fold:
     """Decide for or against a fold and measure it.
 
     Parameters
     ----------
     view : View
         The edge of the picture.
+    plain : float
+        What ``suspect`` found.
     edge_sigma : float
         Standard deviation of a bar edge, samples or lines.
 
@@ -64,20 +83,10 @@ def find_fold(view: View, edge_sigma: float) -> Fold:
     Unreadable
         If something stands before the forward code that no fold explains.
     """
-    ahead = view.start - 0.8 * view.bar if view.blanked else view.start + 0.6
-    low, high = (
-        max(0, math.ceil(ahead)),
-        int(max(view.latest, view.certified + view.bar) + 1.5 * view.bar) + 1,
-    )
-    if not view.blanked:  # a wall that close to the first line could not be read
-        hidden = [wall for band in view.bands for wall in band.met[1:3] if abs(wall - view.start) < 2.5]
-        low = max([low, *(math.ceil(wall + 1.6) for wall in hidden)])
-    view = replace(view, bands=tuple(band.between(low, high) for band in view.bands))
-    plain = _misfit_before(view, [unfolded_misfit(band, view.black_until) for band in view.bands])
     none = Fold(Estimate(0.0, max(edge_sigma, 1e-3)), misfit=(plain, plain))
     if plain < PLAIN:
         return none
-    fit = fit_fold(view)
+    fit = fit_fold(_strip(view))
     if fit.misfit < BETTER * plain and fit.length.value > LEAST * view.bar:
         return Fold(fit.length, fit.turning, fit.ratio, (plain, fit.misfit))
     if plain < 2.5 * PLAIN or fit.length.value <= LEAST * view.bar:
@@ -85,11 +94,12 @@ def find_fold(view: View, edge_sigma: float) -> Fold:
     raise Unreadable("what stands before the forward code is neither black nor folded picture")
 
 
-def _misfit_before(view: View, left: list[Array]) -> float:
-    """Rms of what is left where a fold would lie; a stretch of less than a bar counts as one bar."""
-    energy = [
-        float(np.sum(rest[band.t < view.certified] ** 2))
-        / max(float(np.sum(band.t < view.certified)), view.bar)
-        for band, rest in zip(view.bands, left, strict=True)
-    ]
-    return float(np.sqrt(np.mean(energy)))
+def _strip(view: View) -> View:
+    """Cut the bands to what a fold may touch."""
+    ahead = view.start - 0.8 * view.bar if view.blanked else view.start + 0.6
+    low = max(0, math.ceil(ahead))
+    high = int(max(view.latest, view.certified + view.bar) + 1.5 * view.bar) + 1
+    if not view.blanked:  # a wall that close to the first line could not be read
+        hidden = [wall for band in view.bands for wall in band.met[1:3] if abs(wall - view.start) < 2.5]
+        low = max([low, *(math.ceil(wall + 1.6) for wall in hidden)])
+    return replace(view, bands=tuple(band.between(low, high) for band in view.bands))

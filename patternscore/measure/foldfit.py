@@ -7,13 +7,15 @@ from dataclasses import dataclass, replace
 import numpy as np
 import numpy.typing as npt
 
-from patternscore.measure.foldmodel import TURNS, Turn, folded
+from patternscore.measure.foldmodel import TURNS, Look, Turn, folded, look_at, with_turn
 from patternscore.measure.foldsearch import bent_starts, sharp_starts
 from patternscore.measure.foldview import View
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[np.float64]
 SHARP, BENT = 5, 2  # starts from the coarse searches
+SHARES = (0.0, 0.6, 0.9)  # parts of the step's width that the spot may have
+LENGTHS = (0.1, 0.5, 1.5, 3.5)  # durations of the turn tried, bars
 KEPT = 2  # of them, fitted to the end with every kind of turn
 FLOOR = 0.01  # misfit, of the bars' contrast, that even the true scan may leave in a band
 # What is known beforehand of start (bars off nominal), ratio and duration (bars), as mean and standard
@@ -53,10 +55,19 @@ def fit_fold(view: View) -> FoldFit:
     deepest = (view.bands[0].t[-1] - view.start) / float(view.bands[0].slope(0.0))
     bands = tuple(band.shallower(max(10.0 * deepest, 0.2)) for band in view.bands)
     view = replace(view, bands=bands)
+    looks = {share: [look_at(band, share, view.blanked) for band in bands] for share in SHARES}
     problem = _Problem(view)
-    starts = problem.free(np.concatenate([sharp_starts(view, SHARP), bent_starts(view, BENT)]))
-    screened = sorted((problem.descend(start, "ramp", 5) for start in starts), key=lambda end: end.cost)
-    endings = [problem.descend(end.free, turn, 12) for end in screened[:KEPT] for turn in TURNS]
+    middle = looks[SHARES[1]]
+    sharp = with_turn(sharp_starts(view, SHARP), LENGTHS[1] * view.bar)
+    starts = problem.free(np.concatenate([sharp, bent_starts(view, middle, BENT)]))
+    screened = sorted((problem.descend(start, middle, "ramp", 5) for start in starts), key=lambda end: end.cost)
+    shared = [problem.descend(end.free, looks[s], "ramp", 5) for end in screened[:KEPT] for s in SHARES]
+    first = min(range(len(shared)), key=lambda index: shared[index].cost)
+    chosen, found = looks[SHARES[first % len(SHARES)]], problem.parameters(shared[first].free[None, :])
+    turned = problem.free(np.concatenate([with_turn(found, length * view.bar) for length in LENGTHS]))
+    endings = [*shared, *(problem.descend(one, chosen, "ramp", 6) for one in turned)]
+    nearest = min(endings, key=lambda ending: ending.cost)
+    endings += [problem.descend(nearest.free, chosen, turn, 8) for turn in TURNS]
     best = min(endings, key=lambda ending: ending.cost)
     weights = np.exp(-0.5 * np.array([ending.cost - best.cost for ending in endings]))
     weights /= weights.sum()
@@ -97,27 +108,27 @@ class _Problem:
         logs = np.log(parameters[:, 2:] / np.array([1.0, bar]))
         return np.concatenate([parameters[:, :2] / bar, logs], axis=1)
 
-    def left(self, free: Array, turn: Turn) -> Array:
+    def left(self, free: Array, looks: list[Look], turn: Turn) -> Array:
         """Weighted departures for several sets of free parameters, the last four from what is known."""
         parameters = self.parameters(free)
-        levels = [folded(band, parameters, turn, self.view.blanked) for band in self.view.bands]
+        levels = [folded(look, parameters, turn) for look in looks]
         departure = (np.concatenate(levels, axis=1) - self.target) / self.unit
         return np.concatenate([departure, (free - self.known) * self.pull], axis=1)
 
-    def jacobian(self, free: Array, turn: Turn, left: Array) -> Array:
+    def jacobian(self, free: Array, looks: list[Look], turn: Turn, left: Array) -> Array:
         """Slopes of the departures by each free parameter, (4, n)."""
-        return np.asarray((self.left(free[None, :] + np.diag(STEPS), turn) - left) / STEPS[:, None])
+        return np.asarray((self.left(free[None, :] + np.diag(STEPS), looks, turn) - left) / STEPS[:, None])
 
-    def descend(self, start: Array, turn: Turn, most: int) -> _Ending:
+    def descend(self, start: Array, looks: list[Look], turn: Turn, most: int) -> _Ending:
         """Levenberg-Marquardt from one start."""
         free, damping = start.copy(), 1e-2
-        left = self.left(free[None, :], turn)[0]
-        slopes = self.jacobian(free, turn, left)
+        left = self.left(free[None, :], looks, turn)[0]
+        slopes = self.jacobian(free, looks, turn, left)
         for _ in range(most):
             normal = slopes @ slopes.T
             move = -np.linalg.solve(normal + damping * np.diag(np.diag(normal) + 1e-9), slopes @ left)
             move = np.clip(move, [-0.4, -0.15, -0.4, -0.8], [0.4, 0.15, 0.4, 0.8])
-            fresh = self.left((free + move)[None, :], turn)[0]
+            fresh = self.left((free + move)[None, :], looks, turn)[0]
             gain = float(left @ left - fresh @ fresh)
             if gain <= 0:
                 damping *= 10
@@ -125,7 +136,7 @@ class _Problem:
                     break
                 continue
             free, left, damping = free + move, fresh, max(damping / 5, 1e-6)
-            slopes = self.jacobian(free, turn, left)
+            slopes = self.jacobian(free, looks, turn, left)
             if gain < 1e-2:
                 break
         normal = slopes @ slopes.T

@@ -7,7 +7,8 @@ from itertools import product
 import numpy as np
 import numpy.typing as npt
 
-from patternscore.measure.foldmodel import Band, folded_coarsely
+from patternscore.measure.foldband import Band
+from patternscore.measure.foldmodel import Look, folded
 from patternscore.measure.foldview import LEAST, View
 
 Array = npt.NDArray[np.float64]
@@ -42,7 +43,7 @@ def sharp_starts(view: View, most: int) -> Array:
 
 def _sharp_cost(view: View, band: Band, turning: Array) -> Array:
     """Sum of squares that sharp folds leave of a band, (ratios, turning points)."""
-    ahead = band.content[0] + np.diff(band.content) @ band.shape.at(band.t[None, :] - band.met[:, None])
+    ahead = band.content[0] + np.diff(band.content) @ band.shape.at(band.t[None, :] - band.edges[:, None])
     after = np.cumsum((band.level - ahead)[::-1] ** 2)[::-1]
     right = np.append(after, 0.0)[np.searchsorted(band.t, turning)]
     part = (band.t < turning[-1]) & (band.t > (view.start + 2.5 if view.blanked else -1.0))
@@ -67,14 +68,14 @@ def _mirrored(band: Band, pace: float, length: float) -> npt.NDArray[np.float32]
     return (band.content[-1] - np.einsum("k,rkn->rn", steps, values)).astype(np.float32)
 
 
-def bent_starts(view: View, most: int) -> Array:
+def bent_starts(view: View, looks: list[Look], most: int) -> Array:
     """Folds with long turns that come nearest to the bands, as ``sharp_starts``."""
     first = view.start + LEAST * view.bar
     turning = np.arange(first, max(view.latest, first + 0.1), 0.13 * view.bar)
     turns = np.array(BENT_TURNS) * view.bar
     tries = np.array(list(product(turning, [view.start], BENT_RATIOS, turns)))
     target = np.concatenate([band.level for band in view.bands]).astype(np.float32)
-    levels = [folded_coarsely(band, tries, view.blanked) for band in view.bands]
+    levels = [folded(look, tries, "ramp") for look in looks]
     cost = np.mean((np.concatenate(levels, axis=1) - target) ** 2, axis=1)
     chosen: list[int] = []
     for candidate in np.argsort(cost)[:300]:

@@ -9,7 +9,7 @@ import numpy as np
 import numpy.typing as npt
 
 from patternscore.errors import Unreadable
-from patternscore.measure.foldmodel import Band
+from patternscore.measure.foldband import Band
 from patternscore.measure.ruler import Bars
 from patternscore.measure.stepshape import StepShape
 from patternscore.plan import Plan, Ruler, Side
@@ -117,12 +117,8 @@ def _band(plan: Plan, bars: Bars, side: Side, start: float, late: float) -> tupl
     bar = 1.0 / _bars_across(strip.ruler)
     forward, first = _forward(at[use], (place - late * sign)[use], doubt[use], bar)
     use = use[first:]
-    u = np.arange(count) * (2.0 / count) - 1.0
-    polyval = np.polynomial.polynomial.polyval
-    swing = polyval(u, bars.swing)
-    odd = np.arange(count) % 2
-    level = (strip.mean - polyval(u, bars.base) - bars.lift * odd) / swing
-    t = np.arange(count) + bars.lag * odd
+    level = bars.level
+    t = np.arange(count) + bars.lag * (np.arange(count) % 2)
     walls, content = _content(plan, strip.ruler, side, far)
     black = -float(bars.base[0]) / float(bars.swing[0])
     shape = bars.shape
@@ -134,11 +130,14 @@ def _band(plan: Plan, bars: Bars, side: Side, start: float, late: float) -> tupl
         end = float(forward @ [1.0, walls[1], walls[1] ** 2])
         seen = _seen_corner(level, end, bar * float(forward[1]), start)
         content[1] = content[1] if seen is None else seen
-    reader = Band(t, level, walls, content, shape, forward, walls, late, noise)
+    limits = (float(level.min()), float(level.max()))
+    unread = np.zeros(walls.size, dtype=bool)
+    reader = Band(t, level, walls, content, shape, forward, walls, unread, late, noise, limits)
     met = reader.reach(walls)
     nearest = use[np.argmin(np.abs(at[use][None, :] - walls[:, None]), axis=1)]
-    met = np.where(np.abs(at[nearest] - walls) < 1e-6, place[nearest], met)
-    return replace(reader, met=met), place[use]
+    read = np.abs(at[nearest] - walls) < 1e-6
+    met = np.where(read, (place - late * sign)[nearest], met)
+    return replace(reader, met=met, read=read), place[use]
 
 
 def _forward(at: Array, place: Array, doubt: Array, bar: float) -> tuple[Array, int]:

@@ -8,7 +8,7 @@ edge is freed from the tails of its neighbours.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from typing import Literal
 
@@ -18,7 +18,7 @@ import numpy.typing as npt
 
 from patternscore.errors import Unreadable
 from patternscore.frame import Frame
-from patternscore.measure.stepshape import StepShape, StepTrain, fit_shape, spot_width
+from patternscore.measure.stepshape import StepShape, StepTrain, finer_shape, fit_shape, spot_width
 from patternscore.plan import Ruler
 from patternscore.warp import Warp
 
@@ -103,6 +103,14 @@ class Bars:
     lift: float
 
     @property
+    def level(self) -> Array:
+        """Levels along the strip: 0 for dark bars, 1 for light ones, the fields made alike."""
+        count = self.strip.mean.size
+        powers = np.polynomial.polynomial.polyvander(np.arange(count) * (2.0 / count) - 1.0, 2)
+        lifted = self.strip.mean - powers @ self.base - self.lift * (np.arange(count) % 2)
+        return np.asarray(lifted / (powers @ self.swing))
+
+    @property
     def contrast(self) -> float:
         """Light less dark in the middle, IRE."""
         return float(self.swing[0])
@@ -159,9 +167,7 @@ def straighten(frame: Frame, warp: Warp, ruler: Ruler) -> Strip:
     return Strip(ruler, axis, middle, rows, mean, scatter, seen, found[28:, along])
 
 
-def _means(
-    rows: npt.NDArray[np.float32], inside: npt.NDArray[np.bool_]
-) -> tuple[Array, Array, npt.NDArray[np.bool_]]:
+def _means(rows: npt.NDArray[np.float32], inside: npt.NDArray[np.bool_]) -> tuple[Array, Array, npt.NDArray[np.bool_]]:
     """Mean of the rows, the scatter of the mean, and where there were rows enough.
 
     The halves are made of pairs of neighbouring rows, so that both hold as much of either field.
@@ -321,6 +327,18 @@ def _refine(
         if turn > 0 and np.abs(shifts.move[good]).max() < SETTLED:
             break
     noise = fitted.shape.shifts(strip.scatter[part] / scale, whole).move
-    return Bars(
-        strip, at, sign, place, good, noise, shifts.doubt, fitted.shape, base, swing, lag, fitted.lift
-    )
+    return Bars(strip, at, sign, place, good, noise, shifts.doubt, fitted.shape, base, swing, lag, fitted.lift)
+
+
+def sharpen(bars: list[Bars]) -> list[Bars]:
+    """Give the rulers of one direction the step shape they share, finer than the first fit has it."""
+    lefts = []
+    for one in bars:
+        run = np.flatnonzero(one.good)
+        inner = slice(run[0], run[-1] + 1)
+        low = max(math.ceil(one.place[run[0]] - 3.0), 0)
+        high = min(math.floor(one.place[run[-1]] + 3.0), one.strip.mean.size - 1)
+        train = StepTrain(low, high, one.place[inner], one.sign[inner], one.lag)
+        lefts.append((one.level[low : high + 1] - bars[0].shape.wave(train), train))
+    shape = finer_shape(bars[0].shape, lefts)
+    return [replace(one, shape=shape) for one in bars]

@@ -11,9 +11,9 @@ import numpy.typing as npt
 from patternscore.errors import Unreadable
 from patternscore.frame import Frame
 from patternscore.located import Located
-from patternscore.measure.fold import Fold, find_fold
+from patternscore.measure.fold import PLAIN, Fold, find_fold, suspect
 from patternscore.measure.foldview import view_edge
-from patternscore.measure.ruler import Axis, Bars, axis_of, read_bars, straighten
+from patternscore.measure.ruler import Axis, Bars, axis_of, read_bars, sharpen, straighten
 from patternscore.measure.scanmap import ScanMap, crush, fit_scan, linearity
 from patternscore.measure.stepshape import StepShape
 from patternscore.plan import Side
@@ -36,9 +36,7 @@ class Scan:
     folds: dict[str, Fold]
 
 
-def read_scan(
-    frame: Frame, located: Located, kernel: npt.NDArray[np.floating[Any]] | None = None
-) -> Findings:
+def read_scan(frame: Frame, located: Located, kernel: npt.NDArray[np.floating[Any]] | None = None) -> Findings:
     """Read the scan from the rulers of a located chart.
 
     Parameters
@@ -89,9 +87,7 @@ def _blanking(findings: Findings, frame: Frame, located: Located) -> None:
         findings.add(key, "us", Estimate(value / frame.sample_rate, 0.03 / frame.sample_rate), "edge")
 
 
-def _read_axis(
-    findings: Findings, frame: Frame, located: Located, axis: Axis, shape: StepShape | None
-) -> None:
+def _read_axis(findings: Findings, frame: Frame, located: Located, axis: Axis, shape: StepShape | None) -> None:
     keys = [*_fold_keys(axis), *_crush_keys(axis), f"linearity_{axis}", SIZE[axis], f"centre_{axis}"]
     bars, reasons = _all_bars(frame, located, axis)
     try:
@@ -103,8 +99,7 @@ def _read_axis(
         return
     raster = frame.raster
     nominal = (raster.left, raster.right) if axis == "h" else (raster.top, raster.bottom)
-    shaped = bars if shape is None else [replace(one, shape=shape) for one in bars]
-    folds = _folds(findings, frame, located, axis, shaped, scan, nominal)
+    folds = _folds(findings, frame, located, bars, scan, nominal, shape)
     last = (frame.samples if axis == "h" else frame.rows) - 0.5
     starts = [max(nominal[0], -0.5), min(nominal[1], last)]
     for end, side in enumerate(SIDES[axis]):
@@ -132,18 +127,24 @@ def _folds(
     findings: Findings,
     frame: Frame,
     located: Located,
-    axis: Axis,
     bars: list[Bars],
     scan: ScanMap,
     nominal: tuple[float, float],
+    shape: StepShape | None,
 ) -> dict[str, Fold]:
     """Read the fold at both ends of the scan."""
+    axis = scan.axis
+    if shape is not None:
+        bars = [replace(one, shape=shape) for one in bars]
     per_unit = frame.sample_rate if axis == "h" else 1.0
     folds: dict[str, Fold] = {}
     for end, side in enumerate(SIDES[axis]):
         try:
             view = view_edge(located.plan, bars, side, nominal[end], scan.late)
-            fold = find_fold(view, scan.edge_sigma)
+            plain = suspect(view)
+            if plain > PLAIN and shape is None:
+                view = view_edge(located.plan, sharpen(bars), side, nominal[end], scan.late)
+            fold = find_fold(view, plain, scan.edge_sigma)
         except Unreadable as reason:
             findings.miss(reason.reason, f"fold_{side}")
             continue

@@ -141,9 +141,7 @@ def fit_scan(bars: list[Bars]) -> ScanMap:
     penalty = _penalty(axis)
     if len(bars) == 1:
         penalty = penalty.copy()
-        penalty[np.diag_indices(penalty.shape[0])] += np.repeat(
-            [0.0, 1.0, 0.0], [PIECES[axis] + 3, SIDE_TERMS, 1]
-        )
+        penalty[np.diag_indices(penalty.shape[0])] += np.repeat([0.0, 1.0, 0.0], [PIECES[axis] + 3, SIDE_TERMS, 1])
     # An edge's error: what noise does to it, measured between halves of the bands, and its doubt.
     spread = float(np.sqrt(np.mean((noise[good] - np.mean(noise[good])) ** 2)))
     error = np.sqrt(doubt**2 + spread**2 + CLEAN**2)

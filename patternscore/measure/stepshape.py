@@ -79,6 +79,11 @@ class StepShape:
     table: Array
     width: float
 
+    @property
+    def fine(self) -> int:
+        """Points of the table per sample."""
+        return FINE
+
     @classmethod
     def gaussian(cls, width: float) -> StepShape:
         """Step seen by a Gaussian spot of a standard deviation in samples."""
@@ -182,9 +187,7 @@ class ShapeFit:
     left: Array
 
 
-def fit_shape(
-    mean: Array, powers: Array, scale: Array, train: StepTrain, width: float, *, fields: bool
-) -> ShapeFit:
+def fit_shape(mean: Array, powers: Array, scale: Array, train: StepTrain, width: float, *, fields: bool) -> ShapeFit:
     """Fit the common shape of steps at known places, together with the levels they run between.
 
     Parameters
@@ -263,3 +266,48 @@ def spot_width(flat: Array, train: StepTrain) -> float:
     rise = float(np.median((flat[index + 2] - flat[index - 1]) * train.sign))  # over three samples
     half = min(max(rise / 2.0, 0.08), 0.498)
     return max(1.5 / float(ndtri(0.5 + half)), NARROWEST)
+
+
+def finer_shape(shape: StepShape, lefts: list[tuple[Array, StepTrain]]) -> StepShape:
+    """Correct a step by what it leaves of trains of bars, to half a sample and smoothly.
+
+    Parameters
+    ----------
+    shape : StepShape
+        The step so far.
+    lefts : list of (n,) float64 and StepTrain
+        What each train leaves, of its contrast, and the train.
+    """
+    nodes = 2 * (BEFORE + AFTER) + 3
+    normal = 0.05 * np.eye(nodes)
+    right = np.zeros(nodes)
+    for left, train in lefts:
+        design = _splines(train, nodes)
+        normal += design.T @ design
+        right += design.T @ left
+    taus = _taus()
+    basis = cubic_splines((taus + BEFORE) * 2.0, nodes)
+    return StepShape(shape.table + basis @ np.linalg.solve(normal, right), shape.width)
+
+
+def _splines(train: StepTrain, nodes: int) -> Array:
+    """Cubic splines half a sample apart about every step, signed and summed: (n, nodes)."""
+    index = np.ceil(train.place - BEFORE).astype(np.int64)[:, None] + np.arange(BEFORE + AFTER)[None, :]
+    inside = (index >= train.low) & (index <= train.high)
+    values = cubic_splines(((train.taken(index) - train.place[:, None] + BEFORE) * 2.0)[inside], nodes)
+    signed = values * np.broadcast_to(train.sign[:, None], index.shape)[inside][:, None]
+    design = np.zeros((train.count, nodes))
+    np.add.at(design, index[inside] - train.low, signed)
+    return design
+
+
+def cubic_splines(where: Array, nodes: int) -> Array:
+    """Uniform cubic B-splines, a node apart, from 0 on: (n, nodes); nothing beyond the ends."""
+    inside = (where >= 0) & (where < nodes - 3)
+    cell = np.where(inside, where, 0.0).astype(np.int64)
+    u = np.where(inside, where - cell, 0.0)
+    rest = 1.0 - u
+    weights = np.stack([rest**3, 3 * u**3 - 6 * u**2 + 4, 3 * rest**3 - 6 * rest**2 + 4, u**3], axis=-1)
+    basis = np.zeros((where.size, nodes))
+    np.put_along_axis(basis, cell[:, None] + np.arange(4)[None, :], weights / 6.0 * inside[:, None], axis=1)
+    return basis
