@@ -114,7 +114,7 @@ def _without_spot(shape: StepShape, spot: float, limited: bool) -> StepShape:
     spread = np.fft.rfft(np.diff(shape.table))
     omega = 2.0 * np.pi * np.fft.rfftfreq(shape.table.size - 1, 1.0 / fine)
     fade = np.clip((1.05 * np.pi - omega) / (0.3 * np.pi), 0.0, 1.0)
-    gain = np.minimum(np.exp(0.5 * (spot * omega) ** 2), 12.0) * np.sin(0.5 * np.pi * fade) ** 2
+    gain = np.minimum(np.exp(np.minimum(0.5 * (spot * omega) ** 2, 5.0)), 12.0) * np.sin(0.5 * np.pi * fade) ** 2
     steps = np.fft.irfft(spread * gain, shape.table.size - 1)
     return StepShape(np.concatenate([[0.0], np.cumsum(steps)]), shape.width)
 
