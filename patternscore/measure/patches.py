@@ -63,7 +63,7 @@ class SeenPatch:
 def seen_patches(frame: Frame, located: Located, patches: tuple[Patch, ...]) -> list[SeenPatch]:
     """Cores of the patches that lie inside the frame, in the plan's order."""
     found = []
-    boxes = _boxes(located.warp, patches)
+    boxes = patch_boxes(located.warp, patches)
     for patch, (x0, y0, x1, y1) in zip(patches, boxes, strict=True):
         if x0 < 0 or y0 < 0 or x1 >= frame.samples or y1 >= frame.rows:
             continue
@@ -75,13 +75,11 @@ def seen_patches(frame: Frame, located: Located, patches: tuple[Patch, ...]) -> 
     return found
 
 
-def _boxes(warp: Warp, patches: tuple[Patch, ...]) -> Array:
+def patch_boxes(warp: Warp, patches: tuple[Patch, ...]) -> Array:
     """Upright boxes that lie wholly inside the patches' cores, (n, 4) first and last sample and line."""
     corners = []
     for patch in patches:
-        core = patch.rect.inset(
-            _SIDE * (patch.rect.x1 - patch.rect.x0), _ENDS * (patch.rect.y1 - patch.rect.y0)
-        )
+        core = patch.rect.inset(_SIDE * (patch.rect.x1 - patch.rect.x0), _ENDS * (patch.rect.y1 - patch.rect.y0))
         corners.append([(core.x0, core.y0), (core.x1, core.y0), (core.x0, core.y1), (core.x1, core.y1)])
     places = warp.to_frame(np.reshape(corners, (-1, 2))).reshape(-1, 4, 2)
     x, y = places[..., 0], places[..., 1]
