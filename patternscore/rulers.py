@@ -25,6 +25,15 @@ def is_orientable(bits: tuple[int, ...], order: int) -> bool:
     return True
 
 
+def most_windows(order: int) -> int:
+    """Windows that an orientable sequence can have at most.
+
+    Of all words of n bits, those that read the same backwards cannot occur, and of the others one of each
+    pair: 2^(n-1) - 2^floor((n-1)/2). Source: Gabric and Sawada, on orientable sequences.
+    """
+    return int(2 ** (order - 1) - 2 ** ((order - 1) // 2))
+
+
 @cache
 def orientable_sequence(length: int, order: int = ORDER, seed: int = 1) -> tuple[int, ...]:
     """Find an orientable sequence with no run longer than three.
@@ -34,7 +43,7 @@ def orientable_sequence(length: int, order: int = ORDER, seed: int = 1) -> tuple
     length : int
         Number of bits.
     order : int
-        Window length n.
+        Window length n, 5 or more.
     seed : int
         Start of the search; the same seed gives the same sequence.
 
@@ -42,7 +51,14 @@ def orientable_sequence(length: int, order: int = ORDER, seed: int = 1) -> tuple
     -------
     tuple of int
         ``length`` bits, 0 or 1.
+
+    Raises
+    ------
+    ValueError
+        If there is no such sequence, or none was found.
     """
+    if order < 5 or length - order + 1 > most_windows(order):
+        raise ValueError(f"there is no orientable sequence of {length} bits and order {order}")
     for attempt in range(1000):
         found = _search(length, order, Random(1000 * seed + attempt))
         if found is not None:

@@ -27,7 +27,7 @@ def write_drawing(path: Path, standard: Standard) -> None:
     dates = {"Date": None} if kind == "svg" else {"CreationDate": None, "ModDate": None}
     title = {"Title": f"patternscore chart {standard.name}"}
     # Own settings of the user's must not change the page or the outlines.
-    fixed = {"svg.hashsalt": "patternscore", "savefig.bbox": "standard", "path.simplify": False}
+    fixed: dict[Any, Any] = {"svg.hashsalt": "patternscore", "savefig.bbox": "standard", "path.simplify": False}
     with matplotlib.rc_context(fixed):
         try:
             drawn(standard).savefig(path, format=kind, metadata=title | dates)
@@ -60,7 +60,7 @@ def _artists(shape: Shape, standard: Standard) -> Iterator[Any]:
         case Burst():
             yield from _bars(_sliced(shape, standard))
         case Polygon():
-            yield _filled([np.array(shape.corners)], shape.level)
+            yield _filled(shape.contours, shape.level)
         case Disc():
             yield _disc(shape)
         case Lettering():

@@ -34,8 +34,9 @@ def render(standard: Standard, width: int, height: int) -> Levels:
     Returns
     -------
     (height, width) float32
-        IRE, read-only: exact means over each sample's area (discs as polygons of 2880 corners). The last
-        few sizes drawn are kept.
+        IRE, read-only: means over each sample's area (discs as polygons of 2880 corners), exact but for the few
+        samples in which rims of shapes that lie one over the other meet at a slant. The last few sizes drawn
+        are kept.
     """
     canvas = np.zeros((height, width), dtype=np.float32)
     for layer in layers(chart_plan(standard)):
@@ -61,7 +62,7 @@ def _shape(shape: Shape, width: int, height: int, standard: Standard) -> tuple[W
         case Burst():
             return _upright(shape.rect, "h", _burst_integral(shape, standard), width, height)
         case Polygon():
-            return _filled([np.array(shape.corners)], shape.level, width, height)
+            return _filled(shape.contours, shape.level, width, height)
         case Disc():
             return _filled(disc_outlines(shape), shape.level, width, height)
         case Lettering():

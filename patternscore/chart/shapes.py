@@ -11,6 +11,9 @@ from dataclasses import dataclass
 from itertools import pairwise
 from typing import Literal
 
+import numpy as np
+import numpy.typing as npt
+
 from patternscore import layout
 from patternscore.chart.lettering import Lettering, labels
 from patternscore.layout import COLUMNS, DARK, GROUND, LIGHT, ROWS, SLANT
@@ -32,10 +35,16 @@ class Bars:
 
 @dataclass(frozen=True, slots=True)
 class Polygon:
-    """A polygon of one level."""
+    """A polygon of one level; the corners of a ``hole`` run the other way round than its own."""
 
     corners: tuple[Point, ...]
     level: float
+    hole: tuple[Point, ...] = ()
+
+    @property
+    def contours(self) -> list[npt.NDArray[np.float64]]:
+        """Outline, and that of the hole if there is one, (n, 2) each."""
+        return [np.array(outline) for outline in (self.corners, self.hole) if outline]
 
 
 @dataclass(frozen=True, slots=True)
@@ -63,8 +72,7 @@ def layers(plan: Plan) -> Iterator[Layer]:
     yield from _crosshatch(plan)
     yield _blocks()
     yield _light_bars()
-    yield plan.bursts
-    yield tuple(_rows(plan.flats)) + tuple(_rows(plan.steps))
+    yield *plan.bursts, *_gaps(plan.bursts), *_rows(plan.flats), *_rows(plan.steps)
     yield tuple(_marks(plan))
     yield tuple(_ruler(ruler) for ruler in plan.rulers)
     yield tuple(labels(plan))
@@ -84,13 +92,19 @@ def _block(block: tuple[float, float, float, float], level: float) -> Bars:
 
 
 def _crosshatch(plan: Plan) -> Iterator[Layer]:
+    """The outermost lines as one frame; the others end at the middle of the frame's, so that no rims coincide."""
     grid = plan.grid
     assert grid is not None
     half_y, half_x = grid.thickness / 2, grid.thickness * ROWS / COLUMNS / 2
-    left, right = grid.columns[0] - half_x, grid.columns[-1] + half_x
-    top, bottom = grid.rows[0] - half_y, grid.rows[-1] + half_y
-    yield tuple(_box(Rect(x - half_x, top, x + half_x, bottom), grid.line) for x in grid.columns)
-    yield tuple(_box(Rect(left, y - half_y, right, y + half_y), grid.line) for y in grid.rows)
+    (left, *inner_x, right), (top, *inner_y, bottom) = grid.columns, grid.rows
+
+    def ring(by: int) -> tuple[Point, ...]:
+        x0, x1, y0, y1 = left - by * half_x, right + by * half_x, top - by * half_y, bottom + by * half_y
+        return ((x0, y0), (x1, y0), (x1, y1), (x0, y1))[::by]
+
+    yield (Polygon(ring(1), grid.line, ring(-1)),)
+    yield tuple(_box(Rect(x - half_x, top, x + half_x, bottom), grid.line) for x in inner_x)
+    yield tuple(_box(Rect(left, y - half_y, right, y + half_y), grid.line) for y in inner_y)
 
 
 def _blocks() -> Layer:
@@ -98,7 +112,10 @@ def _blocks() -> Layer:
     x, y, radius = layout.circle()
     corners = (_block(block, DARK) for block in layout.CORNER_BLOCKS.values())
     bands = (band for side, block in zip((-1, 1), layout.SIDE_BLOCKS, strict=True) for band in _bands(side, block))
-    return Disc(x, y, radius, DARK), *corners, *bands, _block(layout.TOP_BLOCK, GROUND)
+    # The ground between bursts and flats ends under both: its rim must not coincide with theirs.
+    left, top, right, bottom = layout.TOP_BLOCK
+    strip = _block((left, top + 0.3, right, bottom - 0.3), GROUND)
+    return Disc(x, y, radius, DARK), *corners, *bands, strip
 
 
 def _bands(side: int, block: tuple[float, float, float, float]) -> Iterator[Shape]:
@@ -131,6 +148,12 @@ def _light_bars() -> Layer:
     )
     squares = (Polygon(_cells(*layout.square_corners(place)), LIGHT) for place in layout.CORNER_BLOCKS)
     return *bars, *squares
+
+
+def _gaps(bursts: tuple[Burst, ...]) -> Iterator[Bars]:
+    """Ground between the packets."""
+    for before, after in pairwise(burst.rect for burst in bursts):
+        yield _box(Rect(before.x1, before.y0, after.x0, before.y1), GROUND)
 
 
 def _rows(patches: tuple[Patch, ...]) -> Iterator[Bars]:
