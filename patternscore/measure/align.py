@@ -1,0 +1,202 @@
+"""Where the edges lie in each line, to a small part of a sample."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from patternscore.errors import Unreadable
+from patternscore.measure.profile import FEWEST, LOWEST, Strip
+from patternscore.measure.stepbasis import BINS
+
+Array = npt.NDArray[np.float64]
+ALIKE = 0.15  # part of the step within which edges of one block are taken to have the same levels
+DEGREE = 3  # of the run of an edge: turn, bow and the bend of a non-linear sweep
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Alignment:
+    """How well rows were brought into step.
+
+    Attributes
+    ----------
+    noise : float
+        rms of a sample about the profile, fraction of the step.
+    row_sigma : (n,) float64
+        Standard deviation of each row's measured shift, samples.
+    raw : (n,) float64
+        Measured shift of each row about the smooth run, not shrunk, samples.
+    jitter, jitter_sigma : float
+        rms shift of the rows beyond what noise explains, samples.
+    blur : float
+        Variance by which aligning has narrowed the profile (to be added back), samples squared.
+    """
+
+    noise: float
+    row_sigma: Array
+    raw: Array
+    jitter: float
+    jitter_sigma: float
+    blur: float
+
+
+def run_basis(rows: npt.NDArray[Any], parity: bool) -> Array:
+    """Orthonormal columns for the smooth run of an edge over its rows, and the difference of the fields."""
+    u = (rows - rows.mean()) / max(np.ptp(rows) / 2.0, 1.0)
+    columns = [u**power for power in range(DEGREE + 1)]
+    if parity:
+        columns.append(1.0 - 2.0 * (rows % 2))
+    return np.asarray(np.linalg.qr(np.stack(columns, axis=1))[0])
+
+
+def settle(strip: Strip) -> None:
+    """Find polarity, levels and a first run of every edge by the area under its step; changes the strip.
+
+    Raises
+    ------
+    Unreadable
+        If there is no step to be seen.
+    """
+    basis = run_basis(strip.rows, parity=False)[:, :3]
+    for first in (True, False):
+        times, levels = strip.windows()
+        side = max(int(0.3 * min(strip.left, strip.right)), 2)
+        before = levels[..., :side].mean(axis=(1, 2), dtype=np.float64)
+        after = levels[..., -side:].mean(axis=(1, 2), dtype=np.float64)
+        strip.sign = np.where(after >= before, 1.0, -1.0)
+        strip.middle, strip.step = _levels(before, after)
+        if np.min(strip.step) < LOWEST:
+            raise Unreadable("there is no step to be seen where the plan has an edge")
+        if first:
+            keep = _whole_rows(strip, levels, side)
+            times, levels = times[:, keep], levels[:, keep]
+            basis = run_basis(strip.rows, parity=False)[:, :3]
+        values = strip.signed(levels)
+        # The step lies where a sharp one would leave the same area under the window.
+        area = values.sum(axis=2, dtype=np.float64)
+        ends = (times[..., -1].astype(np.float64) + times[..., 0]) / 2
+        shift = ends - area
+        limit = 0.5 * min(strip.left, strip.right)
+        smooth = _robust_run(np.clip(shift, -limit, limit), basis)
+        strip.position = strip.position + smooth
+    _inside(strip)
+
+
+def _levels(before: Array, after: Array) -> tuple[Array, Array]:
+    """Middle and step of each edge; the same for all where they are alike, for ringing falsifies single ones."""
+    middle, step = (before + after) / 2, np.abs(after - before)
+    common = step.mean()
+    if len(step) > 1 and np.max(np.hypot(step - common, middle - middle.mean())) < ALIKE * common:
+        low, high = np.minimum(before, after).mean(), np.maximum(before, after).mean()
+        return np.full(len(step), (low + high) / 2), np.full(len(step), high - low)
+    return middle, step
+
+
+def _whole_rows(strip: Strip, levels: Any, side: int) -> npt.NDArray[np.bool_]:
+    """Keep the rows that have the whole step: near its ends an edge fades into what lies beyond."""
+    rise = levels[..., -side:].mean(axis=2) - levels[..., :side].mean(axis=2)
+    part = np.mean(rise * (strip.sign / strip.step)[:, None], axis=0)
+    off = np.abs(part / np.median(part) - 1.0)
+    keep = off < max(0.04, 6.0 * float(np.median(off)))
+    if np.count_nonzero(keep) < FEWEST:
+        raise Unreadable("the step differs too much along the edge")
+    strip.rows, strip.position = strip.rows[keep], strip.position[:, keep]
+    return np.asarray(keep)
+
+
+def _robust_run(shift: Array, basis: Array) -> Array:
+    """Smooth run through one shift a row, rows that lie far off left out."""
+    smooth = (shift @ basis) @ basis.T
+    rest = np.abs(shift - smooth)
+    limit = np.maximum(4.0 * 1.4826 * np.median(rest, axis=1, keepdims=True), 0.3)
+    held = np.where(rest > limit, smooth, shift)
+    return np.asarray((held @ basis) @ basis.T)
+
+
+def _inside(strip: Strip) -> None:
+    """Drop rows whose windows reach beyond the frame."""
+    low = strip.position.min(axis=0) - strip.left > 0
+    high = strip.position.max(axis=0) + strip.right + 1 < strip.luma.shape[1] - 1
+    keep = low & high
+    if np.count_nonzero(keep) < FEWEST:
+        raise Unreadable("the edge lies too near the side of the frame")
+    if not keep.all():
+        strip.rows, strip.position = strip.rows[keep], strip.position[:, keep]
+
+
+def refine(strip: Strip, first: int, model: Array, *, jitter: bool) -> Alignment:
+    """Shift every row into step with a model of the profile; changes the strip.
+
+    Parameters
+    ----------
+    model : (edges, bins) array
+        Modelled profiles on bins from ``first``, fraction of the step about its middle.
+    jitter : bool
+        Whether rows may also move on their own (along the line), or only along a smooth run.
+
+    Notes
+    -----
+    One Gauss-Newton step. A row's own shift is measured by all its edges together and shrunk by what noise
+    alone would make of it, so that without jitter the rows keep to the smooth run.
+    """
+    times, levels = strip.windows()
+    values = strip.signed(levels)
+    slope = np.gradient(model, 1.0 / BINS, axis=1).astype(np.float32).ravel()
+    nearest = np.rint(times * np.float32(BINS))
+    off = times - nearest * np.float32(1.0 / BINS)
+    index = np.clip(nearest.astype(np.int64) - first, 0, model.shape[1] - 1)
+    index += (np.arange(len(model)) * model.shape[1])[:, None, None]
+    rate = slope[index]
+    rest = values - model.astype(np.float32).ravel()[index] - rate * off
+    power = np.einsum("erw,erw->er", rate, rate, dtype=np.float64)
+    moved = -np.einsum("erw,erw->er", rest, rate, dtype=np.float64) / np.maximum(power, 1e-9)
+    basis = run_basis(strip.rows, parity=jitter)
+    smooth = (moved @ basis) @ basis.T
+    left_over = moved - smooth
+    weight = power / power.sum(axis=0)
+    if strip.shifts.shape != (len(strip.rows),):
+        strip.shifts = np.zeros(len(strip.rows))
+    own = strip.shifts + (left_over * weight).sum(axis=0)
+    variance = _noise(rest, moved, rate)
+    if not jitter:
+        strip.field_shift += _field_shift(strip, rest, rate)
+    row_variance = variance / power.sum(axis=0)
+    free = 1.0 - basis.shape[1] / len(strip.rows)
+    excess = max(float(np.mean(own**2)) / free - float(row_variance.mean()), 0.0)
+    shrink = excess / (excess + row_variance) if jitter else np.zeros_like(row_variance)
+    strip.position = strip.position + smooth + (own * shrink - strip.shifts)
+    strip.shifts = own * shrink
+    return Alignment(
+        noise=float(np.sqrt(variance)),
+        row_sigma=np.sqrt(row_variance),
+        raw=own,
+        jitter=float(np.sqrt(excess)),
+        jitter_sigma=_jitter_sigma(excess, float(row_variance.mean()), len(own)),
+        blur=float(np.mean(shrink * row_variance)),
+    )
+
+
+def _field_shift(strip: Strip, rest: Any, rate: Any) -> float:
+    """How much later the edges lie in the odd lines than in the even ones, lines; across only."""
+    whole = np.floor(strip.position).astype(np.int64)
+    parity = (whole[..., None] + np.arange(-strip.left, strip.right + 2)) % 2 == 1
+    against, power = rest * rate, rate * rate
+    odd = -float(against[parity].sum()) / max(float(power[parity].sum()), 1e-9)
+    even = -float(against[~parity].sum()) / max(float(power[~parity].sum()), 1e-9)
+    return odd - even
+
+
+def _noise(rest: Any, moved: Array, rate: Any) -> float:
+    """Variance of a sample about the model once every row has been moved into step."""
+    gone = float(np.sum(moved**2 * np.einsum("erw,erw->er", rate, rate, dtype=np.float64)))
+    total = float(np.einsum("erw,erw->", rest, rest, dtype=np.float64))
+    return max(total - gone, 1e-12) / max(rest.size - moved.size, 1)
+
+
+def _jitter_sigma(excess: float, row_variance: float, count: int) -> float:
+    """Scatter of the rms jitter over grabs: that of a variance from ``count`` rows, carried to its root."""
+    of_variance = (excess + row_variance) * np.sqrt(2.0 / count)
+    return float(min(of_variance / (2.0 * np.sqrt(max(excess, 1e-12))), np.sqrt(of_variance)))

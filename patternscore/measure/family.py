@@ -1,0 +1,203 @@
+"""A family of transfer functions: Gaussian spot, two poles and a zero, delay, and a band limit."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+import numpy.typing as npt
+
+from patternscore.measure.stepbasis import BINS, step_basis
+
+Array = npt.NDArray[np.float64]
+Complex = npt.NDArray[np.complex128]
+
+# theta: 0 Gaussian, 1 and 2 denominator, 3 numerator, 4 delay (samples), 5 band limit, 6 its width (cycles/sample)
+PRIOR = np.array([2.0, 2.0, 2.0, 2.0, 2.0, 0.1, 0.06])  # how far from the start each may well go
+LOWEST = np.array([0.0, 0.0, 0.0, -4.0, -20.0, 0.04, 0.008])
+HIGHEST = np.array([20.0, 20.0, 20.0, 20.0, 20.0, 2.0, 0.5])
+GRABBER = (0.455, 0.1)  # a usual anti-alias filter: its middle and width, cycles per sample
+OPEN = (2.0, 0.1)  # none to speak of
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Start:
+    """A member of the family to start from: parameters and the frequency that scales them."""
+
+    theta: Array
+    scale: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Family:
+    """Transfer functions of some parameters.
+
+    Attributes
+    ----------
+    shape : callable
+        Parameters -> transfer function (n,) and its slopes in them (p, n).
+    start, prior, lowest, highest : (p,) float64
+        Where to begin; how far from there each may well go (sigma); limits.
+    """
+
+    shape: Callable[[Array], tuple[Complex, Complex]]
+    start: Array
+    prior: Array
+    lowest: Array
+    highest: Array
+
+
+def around(start: Start, free: tuple[int, ...] = tuple(range(7))) -> Family:
+    """Give the family about a member, some of its parameters free."""
+    moving = np.array(free)
+    nu = step_basis().nu
+
+    def shape(part: Array) -> tuple[Complex, Complex]:
+        theta = start.theta.copy()
+        theta[moving] = part
+        gain, slopes = transfer(theta, start.scale, nu)
+        return gain, slopes[moving]
+
+    return Family(shape, start.theta[moving], PRIOR[moving], LOWEST[moving], HIGHEST[moving])
+
+
+def relative(gain: Complex) -> Family:
+    """Give what a known transfer function becomes by a spot of other size (Gaussian) and a delay."""
+    nu = step_basis().nu
+    square = np.minimum((nu / 0.25) ** 2, 4.0)
+
+    def shape(part: Array) -> tuple[Complex, Complex]:
+        whole = gain * np.exp(-part[0] * square - 2j * np.pi * nu * part[1])
+        return whole, np.stack([-square * whole, -2j * np.pi * nu * whole])
+
+    return Family(shape, np.zeros(2), np.array([0.5, 1.0]), np.array([-0.5, -5.0]), np.array([20.0, 5.0]))
+
+
+def transfer(theta: Array, scale: float, nu: Array) -> tuple[Complex, Complex]:
+    """Transfer function and its slopes in the parameters.
+
+    Parameters
+    ----------
+    theta : (7,) array
+        c, a1, a2, b, t0, middle and width of the band limit.
+    scale : float
+        Frequency that g = nu / scale is in units of, cycles per sample.
+    nu : (n,) array
+        Frequencies, cycles per sample.
+
+    Returns
+    -------
+    (n,) and (7, n) complex
+
+    Notes
+    -----
+    H = exp(-c g^2) (1 + j b g) / (1 + j a1 g - a2 g^2) exp(-2 pi j nu t0), times a half cosine from 1 to 0.
+    The coefficients of the polynomials, not the poles, are the parameters: a pole that is not needed goes to
+    infinity where its coefficient goes to nought, and nothing becomes singular on the way.
+    """
+    c, a1, a2, b, t0, middle, width = theta
+    g = nu / scale
+    upper, lower = 1.0 + 1j * b * g, 1.0 + 1j * a1 * g - a2 * g**2
+    slope = np.clip((nu - middle) / width + 0.5, 0.0, 1.0)
+    limit = 0.5 + 0.5 * np.cos(np.pi * slope)
+    fall = -0.5 * np.pi / width * np.sin(np.pi * slope)
+    open_part = np.exp(-c * g**2 - 2j * np.pi * nu * t0) / lower
+    shaped = open_part * upper
+    whole = shaped * limit
+    slopes = np.stack(
+        [
+            -(g**2) * whole,
+            -1j * g / lower * whole,
+            g**2 / lower * whole,
+            1j * g * open_part * limit,
+            -2j * np.pi * nu * whole,
+            -shaped * fall,
+            -shaped * fall * (nu - middle) / width,
+        ]
+    )
+    return whole, slopes
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Library:
+    """Members of the family spread over all that a chain may be, with their step responses.
+
+    ``edges`` and ``slopes`` are (members, bins) on bins of ``first`` and up, less one half.
+    """
+
+    starts: tuple[Start, ...]
+    edges: Array
+    slopes: Array
+    gram: Array
+
+
+@lru_cache(maxsize=16)
+def library(left: int, right: int, *, across: bool = False) -> Library:
+    """Library on a window of whole samples before and after the edge."""
+    basis = step_basis()
+    starts = tuple(_across() if across else _along())
+    spectra = np.stack([transfer(start.theta, start.scale, basis.nu)[0] for start in starts])
+    rows = slice(basis.origin - left * BINS, basis.origin + right * BINS + 1)
+    edges = np.hstack([spectra.real, spectra.imag]) @ basis.matrix[rows].T
+    slopes = np.gradient(edges, 1.0 / BINS, axis=1)
+    return Library(starts, edges, slopes, _gram(edges, slopes))
+
+
+def _gram(edges: Array, slopes: Array) -> Array:
+    columns = np.stack([np.ones_like(edges), edges, slopes], axis=1)
+    return columns @ columns.transpose(0, 2, 1)
+
+
+def nearest(window: Array, left: int, right: int, *, used: npt.NDArray[np.bool_], across: bool = False) -> Start:
+    """Member of the library that fits a profile best, offset, step and delay free.
+
+    Parameters
+    ----------
+    window : (bins,) array
+        Profile on the window, fraction of the step about its middle.
+    used : (bins,) bool
+        Bins to go by.
+
+    Returns
+    -------
+    Start
+        The member, its delay put right.
+    """
+    shelf = library(left, right, across=across)
+    gram = shelf.gram if used.all() else _gram(shelf.edges[:, used], shelf.slopes[:, used])
+    seen = np.where(used, window, 0.0)
+    inner = np.stack([np.full(len(shelf.starts), seen.sum()), shelf.edges @ seen, shelf.slopes @ seen], axis=1)
+    found = np.linalg.solve(gram, inner[..., None])[..., 0]
+    gain = np.einsum("ka,ka->k", found, inner)
+    best = int(np.argmax(gain))
+    _, step, shift = found[best]
+    start = shelf.starts[best]
+    theta = start.theta.copy()
+    theta[4] -= np.clip(shift / step, -1.0, 1.0) if step > 0 else 0.0
+    return Start(theta, start.scale)
+
+
+def _member(scale: float, c: float, a1: float, a2: float, b: float, limit: tuple[float, float]) -> Start:
+    # Its delay puts the middle of the area under its line spread at time 0, as the edges are set at first.
+    return Start(np.array([c, a1, a2, b, -(a1 - b) / (2 * np.pi * scale), *limit]), scale)
+
+
+def _along() -> list[Start]:
+    shapes = [(0.69, 0.0, 0.0, 0.0), (0.1, 1.0, 0.0, 0.0), (0.1, 2.0, 1.0, 0.0), (0.1, 2.0, 1.0, 1.2)]
+    shapes += [(0.1, 2 * damping, 1.0, 0.0) for damping in (0.2, 0.3, 0.45, 0.65)]
+    shapes += [(0.05, 2 * damping, 1.0, lead) for damping in (0.4, 0.6) for lead in (0.8, 1.6)]
+    found = [
+        _member(scale, *shape, limit)
+        for scale in np.geomspace(0.05, 0.6, 15)
+        for shape in shapes
+        for limit in (GRABBER, OPEN)
+    ]
+    found += [_member(0.5, 0.0, 0.0, 0.0, 0.0, (middle, 0.03)) for middle in np.geomspace(0.06, 0.5, 26)]
+    found += [_member(0.5, 0.0, 0.0, 0.0, 0.0, (middle, 0.3 * middle)) for middle in np.geomspace(0.06, 0.5, 18)]
+    return found
+
+
+def _across() -> list[Start]:
+    return [_member(scale, 0.69, 0.0, 0.0, 0.0, OPEN) for scale in np.geomspace(0.04, 1.2, 30)]
