@@ -10,7 +10,6 @@ import numpy as np
 
 from patternscore.card import Card, make_card
 from patternscore.errors import Unreadable
-from patternscore.fields import field_difference
 from patternscore.frame import Frame, average
 from patternscore.keys import keys_of
 from patternscore.layout import chart_plan
@@ -18,6 +17,7 @@ from patternscore.limits import Limits, shipped_limits
 from patternscore.locate import locate
 from patternscore.located import Located
 from patternscore.measure.edge import read_edges
+from patternscore.measure.fields import field_difference
 from patternscore.measure.grid import read_grid, scan_from_grid
 from patternscore.measure.levels import read_levels
 from patternscore.measure.scan import read_scan
@@ -73,7 +73,7 @@ def score_frame(
     readings = {reading.key: reading for reading in findings.readings}
     said = (
         *remarks_on(readings, frame.standard),
-        *field_difference(frame.luma).sentences(),
+        *_fields(frame, located),
         *frame.notes,
     )
     card = make_card(
@@ -85,6 +85,13 @@ def score_frame(
         said,
     )
     return Scored(card, frame, located, findings)
+
+
+def _fields(frame: Frame, located: Located) -> tuple[str, ...]:
+    try:
+        return field_difference(frame, located).sentences()
+    except Unreadable:
+        return ()
 
 
 def score_together(grabs: list[Frame], plan: Plan | None = None, *, limits: Limits | None = None) -> Scored:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 from patternscore.card import Marked
 from patternscore.keys import KEYS
 
@@ -21,11 +23,10 @@ def value_text(key: str, value: float, sigma: float = 0.0) -> str:
 
 
 def sigma_text(key: str, sigma: float) -> str:
-    """Sigma with as many decimals as the value, or two significant digits where that would read 0."""
-    if sigma == 0.0:
-        return "0"
-    text = f"{sigma:.{decimals_for(key, sigma)}f}"
-    return text if float(text) > 0 else f"{sigma:.1g}"
+    """Sigma with as many decimals as the value, rounded up."""
+    decimals = decimals_for(key, sigma)
+    steps = math.ceil(sigma * 10.0**decimals - 1e-6)
+    return f"{steps / 10.0**decimals:.{decimals}f}"
 
 
 def unit_text(unit: str) -> str:

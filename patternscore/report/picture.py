@@ -7,8 +7,9 @@ from typing import Any
 
 import numpy as np
 
+from patternscore.measure.edge import EdgeTrace
 from patternscore.measure.grid import GridTrace
-from patternscore.measure.patches import patch_boxes
+from patternscore.measure.patches import cut_cores
 from patternscore.measure.transfer import Transfer
 from patternscore.report.canvas import EXPECTED, FAINT, INK, MEASURED, OTHER, WRONG, dress, empty, new_figure, save
 from patternscore.report.figures import reading_text
@@ -29,7 +30,7 @@ def card_picture(scored: Scored, path: Path | str) -> None:
     """
     figure = new_figure(16.0, 11.0)
     grid = figure.add_gridspec(
-        3, 4, left=0.045, right=0.985, top=0.925, bottom=0.055, hspace=0.36, wspace=0.27, height_ratios=(1, 1, 0.9)
+        3, 4, left=0.045, right=0.985, top=0.9, bottom=0.055, hspace=0.4, wspace=0.27, height_ratios=(1, 1, 0.9)
     )
     _heading(figure, scored)
     _frame_panel(figure.add_subplot(grid[:2, :2]), scored)
@@ -68,10 +69,12 @@ def _frame_panel(axes: Any, scored: Scored) -> None:
     for edge in plan.edges:
         run = warp.to_frame(np.linspace(edge.start, edge.end, 9))
         axes.plot(*run.T, color=MEASURED if edge.axis == "h" else OTHER, linewidth=1.6)
-    patches = (*plan.steps, *plan.flats, *plan.field)
-    if patches:
-        for x0, y0, x1, y1 in patch_boxes(warp, patches):
-            axes.plot([x0, x1, x1, x0, x0], [y0, y0, y1, y1, y0], color=WRONG, linewidth=0.6, alpha=0.8)
+    for patches in (plan.steps, plan.flats, plan.field):
+        cores = cut_cores(frame, located, patches)
+        tall, wide = cores.levels.shape[1:]
+        for x, y in zip(cores.left, cores.top, strict=True):
+            box = np.array([(0, 0), (wide - 1, 0), (wide - 1, tall - 1), (0, tall - 1), (0, 0)]) + (x, y)
+            axes.plot(*box.T, color=WRONG, linewidth=0.6, alpha=0.8)
     if located.crossings is not None:
         axes.plot(*located.crossings.found.T, "+", color=MEASURED, markersize=7, markeredgewidth=1.2)
     for ruler in plan.rulers:
@@ -99,14 +102,13 @@ def _frame_panel(axes: Any, scored: Scored) -> None:
 
 def _spread_panel(axes: Any, scored: Scored) -> None:
     """Edge spread: level of the step against time."""
-    trace = scored.findings.traces.get("edge")
+    trace: EdgeTrace | None = scored.findings.traces.get("edge")
     if trace is None:
         return empty(axes, "Edge spread", scored.card.missing.get("mtf50_h", "not read"))
-    time = np.asarray(trace.times)
     axes.axhline(100.0, color=FAINT, linewidth=0.9)
     axes.axhline(0.0, color=FAINT, linewidth=0.9)
-    axes.plot(1e3 * time, 100 * np.asarray(trace.profile), ".", color=EXPECTED, markersize=2.5)
-    axes.plot(1e3 * time, 100 * np.asarray(trace.fitted), color=MEASURED, linewidth=1.4)
+    axes.plot(1e3 * trace.profile_us, 100 * trace.profile, ".", color=EXPECTED, markersize=2.5)
+    axes.plot(1e3 * trace.spread.times, 100 * trace.spread.level, color=MEASURED, linewidth=1.4)
     dress(axes, "Edge spread", f"ns      {_said(scored, 'rise_time')}", f"% of the step   {_said(scored, 'overshoot')}")
     axes.set_xlim(-700, 1500)
     return None
@@ -114,11 +116,10 @@ def _spread_panel(axes: Any, scored: Scored) -> None:
 
 def _response_panel(axes: Any, scored: Scored) -> None:
     """Response along the line against frequency, with its two-sigma band."""
-    trace = scored.findings.traces.get("edge")
+    trace: EdgeTrace | None = scored.findings.traces.get("edge")
     if trace is None:
         return empty(axes, "Response along the line", scored.card.missing.get("mtf50_h", "not read"))
-    mhz, gain = np.asarray(trace.mhz), 100 * np.asarray(trace.gain)
-    spread = 200 * np.asarray(trace.gain_sigma)
+    mhz, gain, spread = trace.curve.frequency, 100 * trace.curve.gain, 200 * trace.curve.sigma
     axes.fill_between(mhz, gain - spread, gain + spread, color=MEASURED, alpha=0.18, linewidth=0)
     axes.plot(mhz, gain, color=MEASURED, linewidth=1.4)
     for key, level in (("bandwidth_h", 100 * 10 ** (-3 / 20)), ("mtf50_h", 50.0), ("mtf10_h", 10.0)):
@@ -179,11 +180,10 @@ def _grid_panel(axes: Any, scored: Scored) -> None:
     axes.set_xlim(-2, 100 * ASPECT + 2)
     axes.set_ylim(104, -4)
     axes.set_aspect("equal")
-    names = ("rotation", "trapezoid_h", "trapezoid_v", "bow_h", "bow_v")
     dress(
         axes,
         f"Grid errors, drawn {enlarged:.0f} times too long",
-        "   ".join(_said(scored, key) for key in names[:3]),
+        "   ".join(_said(scored, key) for key in ("position_error", "rotation")),
         "% of picture height",
     )
     axes.text(

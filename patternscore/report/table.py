@@ -22,7 +22,7 @@ COLUMNS = (
     "black_crush", "white_level", "gamma", "noise", "jitter", "mtf50_v", "crush_left", "crush_right", "width",
     "rotation",
 )  # fmt: skip
-_CELL = 16
+_CELL = 15
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,9 +39,8 @@ class Cell:
 
 
 def short_key(key: str) -> str:
-    """Column head: the key and its unit."""
-    unit = unit_text(KEYS[key].unit)
-    return f"{key} {unit}".rstrip()
+    """Column head: the key, and its unit below."""
+    return f"{key}\n{unit_text(KEYS[key].unit)}"
 
 
 def chosen_columns(cards: Sequence[Card], room: int, first: str | None = None) -> list[str]:
@@ -108,12 +107,12 @@ def comparison_view(cards: Sequence[Card], limits: Limits, width: int = 80, firs
     A star marks the best value of a column; a change against the row above that is more than noise stands
     in brackets.
     """
-    room = max((width - 26) // _CELL, 2)
+    room = max((width - 22) // _CELL, 2)
     keys = chosen_columns(cards, room, first)
     named = max((len(_label(card)) for card in cards), default=8)
-    table = Table(box=None, pad_edge=False, padding=(0, 1))
+    table = Table(box=None, pad_edge=False, padding=(0, 1, 0, 0))
     table.add_column(
-        "frame", no_wrap=True, overflow="ellipsis", max_width=min(named, max(width - 7 - _CELL * len(keys), 14))
+        "frame", no_wrap=True, overflow="ellipsis", width=min(named, max(width - 7 - _CELL * len(keys), 13))
     )
     table.add_column("score", justify="right", no_wrap=True)
     for key in keys:
@@ -136,9 +135,9 @@ def _label(card: Card) -> str:
 def _cell_text(cell: Cell | None) -> Text:
     if cell is None:
         return Text("-", style="dim")
-    change = f" [{cell.change}]" if cell.real else "  " if not cell.change else ""
+    change = f"[{cell.change}]" if cell.real else ""
     text = Text(cell.value + ("*" if cell.best else " "), style="bold" if cell.best else "")
-    return text + Text(f"{change:>9}", style="" if cell.real else "dim")
+    return text + Text(f"{change:>8}", style="" if cell.best else "dim")
 
 
 def print_comparison(

@@ -15,6 +15,7 @@ from patternscore.report.figures import mark_text, sigma_text, unit_text, value_
 
 WIDTH = 80
 _BAR = 20
+_SHORT = {"% of PH": "% PH", "degrees": "deg", "lines": "lin", "TVL/PH": "TVL"}  # units in a narrow column
 _TITLES = {
     "resolution": "Resolution",
     "foldback": "Fold-back and crush",
@@ -73,15 +74,12 @@ def _group_body(group: str, card: Card) -> list[Any]:
     if not names:
         return []
     table = Table.grid(padding=(0, 0))
-    for _ in range(2):
-        table.add_column(width=16, no_wrap=True)
-        table.add_column(width=7, justify="right", no_wrap=True)
-        table.add_column(width=8, no_wrap=True)
-        table.add_column(width=8, no_wrap=True)
+    for width, flush in ((17, False), (6, True), (8, False), (5, False), (4, True)) * 2:
+        table.add_column(width=width, justify="right" if flush else "left", no_wrap=True)
     half = (len(names) + 1) // 2
     for row in range(half):
         left = _cells(card[names[row]])
-        right = _cells(card[names[half + row]]) if half + row < len(names) else [Text("")] * 4
+        right = _cells(card[names[half + row]]) if half + row < len(names) else [Text("")] * 5
         table.add_row(*left, *right)
     doubts = [_hanging(f"  ? {name}: ", card[name].doubt or "") for name in names if card[name].doubt]
     return [table, *doubts]
@@ -91,12 +89,12 @@ def _cells(marked: Marked) -> list[Text]:
     key = marked.reading.key
     style = "dim" if marked.doubt else _style(marked.score) if marked.score is not None else ""
     mark = "?" if marked.doubt else mark_text(marked.score)
-    unit = "% PH" if marked.unit == "% of PH" else "deg" if marked.unit == "degrees" else unit_text(marked.unit)
     return [
         Text(f"  {key}", style=style),
         Text(value_text(key, marked.value, marked.sigma), style=style),
         Text(f" +-{sigma_text(key, marked.sigma)}", style="dim"),
-        Text(f" {unit:<4.4} {mark:>3}" if len(unit) <= 4 else f" {unit}", style=style),
+        Text(f" {_SHORT.get(marked.unit, unit_text(marked.unit))}", style=style),
+        Text(mark, style=style),
     ]
 
 
