@@ -54,10 +54,13 @@ def _write_raster(path: Path, standard: Standard, width: int, height: int, bits:
     if width < 64 or height < 48 or width * height > LARGEST:
         raise UsageError(f"{path.name}: {width} x {height} is no size for a chart; ask for 64 x 48 to 64 megapixels")
     full = 2**bits - 1
-    codes = np.rint(render(standard, width, height) * np.float32(full / 100.0))
-    done, data = cv2.imencode(
-        ".png" if path.suffix.lower() == ".png" else ".tiff", codes.astype(np.uint16 if bits == 16 else np.uint8)
-    )
+    levels = np.rint(render(standard, width, height) * np.float32(full / 100.0))
+    codes = levels.astype(np.uint16 if bits == 16 else np.uint8)
+    if path.suffix.lower() == ".png":
+        done, data = cv2.imencode(".png", codes)
+    else:  # deflate of plain samples, which every reader takes
+        deflate = [cv2.IMWRITE_TIFF_COMPRESSION, 8, cv2.IMWRITE_TIFF_PREDICTOR, 1]
+        done, data = cv2.imencode(".tiff", codes, deflate)
     if not done:
         raise UsageError(f"{path.name}: the picture could not be encoded; try another format")
     try:
