@@ -41,10 +41,7 @@ _KEYS = [
         ("mtf50_v", "TVL/PH", 0, "high", "response across the lines falls to 50 %"),
         ("mtf10_v", "TVL/PH", 0, "high", "response across the lines falls to 10 %"),
         ("bandwidth_h", "MHz", 2, "high", "-3 dB point along the line"),
-        *(
-            (f"response_{n}mhz", "dB", 2, "near", f"response at {n} MHz re low frequency")
-            for n in range(1, 6)
-        ),
+        *((f"response_{n}mhz", "dB", 2, "near", f"response at {n} MHz re low frequency") for n in range(1, 6)),
         ("flatness", "dB", 2, "low", "largest departure from 0 dB, 0.5 MHz to the luma bandwidth"),
         ("rise_time", "ns", 0, "low", "10-90 % of an edge"),
         ("overshoot", "%", 1, "low", "of the step, after the edge"),

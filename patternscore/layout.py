@@ -16,6 +16,8 @@ from patternscore.standard import Standard
 
 COLUMNS, ROWS = 16, 12
 DARK, LIGHT, GROUND = 15.0, 85.0, 50.0
+# Edges swing less, so that an overshoot of half the step still lies inside the coding range.
+EDGE_DARK, EDGE_LIGHT = 25.0, 75.0
 SLANT = 1.0 / 12.0  # tangent of 4.8 degrees
 H_BARS, V_BARS = 80, 60
 H_ORDER, V_ORDER = 9, 8
@@ -97,8 +99,8 @@ def _centre_edges() -> list[Edge]:
                 axis="h",
                 start=(_x(cx + offset + lean), _y(cy - BAR_HALF)),
                 end=(_x(cx + offset - lean), _y(cy + BAR_HALF)),
-                before=DARK if rising else LIGHT,
-                after=LIGHT if rising else DARK,
+                before=EDGE_DARK if rising else EDGE_LIGHT,
+                after=EDGE_LIGHT if rising else EDGE_DARK,
                 clear_before=_x(1.0 if number else 0.55),
                 clear_after=_x(1.0 if number < len(BAR_OFFSETS) - 1 else 0.55),
                 place="centre",
@@ -121,8 +123,8 @@ def _side_edges() -> list[Edge]:
                     axis="v",
                     start=(_x(x0), _y(middle + offset + lean)),
                     end=(_x(x1), _y(middle + offset - lean)),
-                    before=DARK if rising else LIGHT,
-                    after=LIGHT if rising else DARK,
+                    before=EDGE_DARK if rising else EDGE_LIGHT,
+                    after=EDGE_LIGHT if rising else EDGE_DARK,
                     clear_before=_y(1.0 if number else 0.65),
                     clear_after=_y(1.0 if number < len(SIDE_OFFSETS) - 1 else 0.65),
                     place="centre",
@@ -153,10 +155,10 @@ def _corner_edges() -> list[Edge]:
         above = _y((y1 - y0 - SQUARE_SIDE) / 2)
         wide, tall = _x(SQUARE_SIDE), _y(SQUARE_SIDE)
         edges += [
-            Edge(f"{place} 1", "h", tl, bl, DARK, LIGHT, beside, wide, place, place),
-            Edge(f"{place} 2", "h", tr, br, LIGHT, DARK, wide, beside, place, place),
-            Edge(f"{place} 3", "v", tl, tr, DARK, LIGHT, above, tall, place, place),
-            Edge(f"{place} 4", "v", bl, br, LIGHT, DARK, tall, above, place, place),
+            Edge(f"{place} 1", "h", tl, bl, EDGE_DARK, EDGE_LIGHT, beside, wide, place, place),
+            Edge(f"{place} 2", "h", tr, br, EDGE_LIGHT, EDGE_DARK, wide, beside, place, place),
+            Edge(f"{place} 3", "v", tl, tr, EDGE_DARK, EDGE_LIGHT, above, tall, place, place),
+            Edge(f"{place} 4", "v", bl, br, EDGE_LIGHT, EDGE_DARK, tall, above, place, place),
         ]
     return edges
 
@@ -182,9 +184,7 @@ def _arms(column: int, row: int) -> str:
     clear = ""
     for letter, (dx, dy) in ways.items():
         ends = not (1 <= column + dx <= COLUMNS - 1 and 1 <= row + dy <= ROWS - 1)
-        if not ends and not any(
-            _covered(column + dx * part, row + dy * part, 0.0) for part in (0.1, 0.2, 0.36)
-        ):
+        if not ends and not any(_covered(column + dx * part, row + dy * part, 0.0) for part in (0.1, 0.2, 0.36)):
             clear += letter
     return clear
 

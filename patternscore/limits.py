@@ -39,9 +39,7 @@ Limits = Mapping[str, Limit]
 @cache
 def shipped_limits() -> Limits:
     """Limits that come with the package."""
-    return _parse(
-        tomllib.loads(files("patternscore").joinpath("limits.toml").read_text("utf-8")), "limits.toml"
-    )
+    return _parse(tomllib.loads(files("patternscore").joinpath("limits.toml").read_text("utf-8")), "limits.toml")
 
 
 def read_limits(path: Path | str) -> Limits:
@@ -56,13 +54,9 @@ def read_limits(path: Path | str) -> Limits:
     try:
         table = tomllib.loads(path.read_text("utf-8"))
     except OSError as error:
-        raise UsageError(
-            f"{path.name}: cannot be read ({error.strerror}); name a TOML file of limits"
-        ) from None
+        raise UsageError(f"{path.name}: cannot be read ({error.strerror}); name a TOML file of limits") from None
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
-        raise UsageError(
-            f"{path.name}: not TOML ({error}); write lines such as [overshoot] and full = 3"
-        ) from None
+        raise UsageError(f"{path.name}: not TOML ({error}); write lines such as [overshoot] and full = 3") from None
     return dict(shipped_limits()) | dict(_parse(table, path.name, shipped_limits()))
 
 

@@ -195,9 +195,7 @@ def _tiff_page(page: Any, data: bytes, number: int) -> Array:
 
 def _check_size(width: int, height: int, name: str) -> None:
     if width < SMALLEST or height < SMALLEST:
-        raise UnscorableFrame(
-            f"{name}: {width} x {height} is too small to hold a pattern; grab a whole frame"
-        )
+        raise UnscorableFrame(f"{name}: {width} x {height} is too small to hold a pattern; grab a whole frame")
     if width * height > LARGEST_PICTURE:
         raise UnscorableFrame(
             f"{name}: {width} x {height} is too large for a video frame; save it at the grabber's own size"
@@ -285,9 +283,7 @@ def list_frames(folder: Path | str) -> list[Path]:
                     if file.suffix.lower() in SUFFIXES and not file.name.startswith(".")
                 ]
             except OSError as error:
-                raise UsageError(
-                    f"{place}: cannot be read ({error.strerror}); check its permissions"
-                ) from None
+                raise UsageError(f"{place}: cannot be read ({error.strerror}); check its permissions") from None
             if found:
                 return sorted(found, key=lambda file: natural(file.name))
     raise UsageError(f"{folder}: holds no frames; put PNG, TIFF, BMP or JPEG files there")

@@ -102,7 +102,7 @@ def test_the_rim_of_the_disc_lies_on_its_circle(row, size):
     y = np.linspace(line / height, (line + 1) / height, 201) - cy
     rim = (cx - np.mean(np.sqrt(radius**2 - y**2)) / ASPECT) * width
     left, right = int(rim - 0.4 * width / COLUMNS), int(rim + 0.15 * width / COLUMNS)
-    ground = (picture[line, left:right].astype(np.float64) - layout.DARK) / (layout.GROUND - layout.DARK)
+    ground = (picture[line, left:right].astype(np.float64) - layout.EDGE_DARK) / (layout.GROUND - layout.EDGE_DARK)
     clear = np.flatnonzero(ground[: round(0.4 * width / COLUMNS) - 4] > 1.001)  # a crosshatch line comes before
     start = int(clear[-1]) + 1 if len(clear) else 0
     assert left + start + ground[start:].sum() == pytest.approx(rim, abs=2e-2)

@@ -16,7 +16,7 @@ import numpy.typing as npt
 
 from patternscore import layout
 from patternscore.chart.lettering import Lettering, labels
-from patternscore.layout import COLUMNS, DARK, GROUND, LIGHT, ROWS, SLANT
+from patternscore.layout import COLUMNS, EDGE_DARK, EDGE_LIGHT, GROUND, ROWS, SLANT
 from patternscore.plan import Burst, Patch, Plan, Point, Rect, Ruler
 
 
@@ -110,12 +110,12 @@ def _crosshatch(plan: Plan) -> Iterator[Layer]:
 def _blocks() -> Layer:
     """What lies over the crosshatch: the disc, the blocks, the ground of bursts and flats."""
     x, y, radius = layout.circle()
-    corners = (_block(block, DARK) for block in layout.CORNER_BLOCKS.values())
+    corners = (_block(block, EDGE_DARK) for block in layout.CORNER_BLOCKS.values())
     bands = (band for side, block in zip((-1, 1), layout.SIDE_BLOCKS, strict=True) for band in _bands(side, block))
     # The ground between bursts and flats ends under both: its rim must not coincide with theirs.
     left, top, right, bottom = layout.TOP_BLOCK
     strip = _block((left, top + 0.3, right, bottom - 0.3), GROUND)
-    return Disc(x, y, radius, DARK), *corners, *bands, strip
+    return Disc(x, y, radius, EDGE_DARK), *corners, *bands, strip
 
 
 def _bands(side: int, block: tuple[float, float, float, float]) -> Iterator[Shape]:
@@ -126,7 +126,7 @@ def _bands(side: int, block: tuple[float, float, float, float]) -> Iterator[Shap
     bounds = [(y0, y0), *inner, (y1, y1)]
     for number, ((left, right), (low_left, low_right)) in enumerate(pairwise(bounds)):
         corners = _cells((x0, left), (x1, right), (x1, low_right), (x0, low_left))
-        yield Polygon(corners, LIGHT if number % 2 else DARK)
+        yield Polygon(corners, EDGE_LIGHT if number % 2 else EDGE_DARK)
 
 
 def _light_bars() -> Layer:
@@ -142,11 +142,11 @@ def _light_bars() -> Layer:
                 (cx + right - lean, cy + high),
                 (cx + left - lean, cy + high),
             ),
-            LIGHT,
+            EDGE_LIGHT,
         )
         for left, right in zip(layout.BAR_OFFSETS[::2], layout.BAR_OFFSETS[1::2], strict=True)
     )
-    squares = (Polygon(_cells(*layout.square_corners(place)), LIGHT) for place in layout.CORNER_BLOCKS)
+    squares = (Polygon(_cells(*layout.square_corners(place)), EDGE_LIGHT) for place in layout.CORNER_BLOCKS)
     return *bars, *squares
 
 
