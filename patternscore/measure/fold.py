@@ -20,8 +20,9 @@ from patternscore.measure.foldview import LEAST, View
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[np.float64]
-PLAIN = 0.10  # rms misfit, of the bars' contrast, up to which the unfolded scan is taken as it is
-BETTER = 0.5  # part of the unfolded scan's misfit that the folded one may leave
+PLAIN = 0.13  # rms misfit, of the bars' contrast, up to which the unfolded scan is taken as it is
+BETTER = 0.4  # part of the unfolded scan's misfit that the folded one may leave
+MISFIT = 0.11  # rms misfit that a folded scan may leave to be believed
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -50,15 +51,15 @@ def suspect(view: View) -> float:
     Returns
     -------
     float
-        rms, of the bars' contrast; there is no reason to think of a fold where it is below ``PLAIN``.
+        Largest rms over the length of a bar, of the bars' contrast; there is no reason to think of a fold
+        where it is below ``PLAIN``.
     """
     view = _strip(view)
-    energy = [
-        float(np.sum(unfolded_misfit(band, view.black_until)[band.t < view.certified] ** 2))
-        / max(float(np.sum(band.t < view.certified)), view.bar)
-        for band in view.bands
-    ]
-    return float(np.sqrt(np.mean(energy)))
+    energy = np.mean([unfolded_misfit(band, view.black_until) ** 2 for band in view.bands], axis=0)
+    energy = energy[view.bands[0].t < view.certified]
+    bar = int(np.ceil(view.bar))
+    run = np.convolve(np.pad(energy, bar), np.full(bar, 1.0 / bar), "valid")
+    return float(np.sqrt(run.max()))
 
 
 def find_fold(view: View, plain: float, edge_sigma: float) -> Fold:
@@ -87,10 +88,8 @@ def find_fold(view: View, plain: float, edge_sigma: float) -> Fold:
     if plain < PLAIN:
         return none
     fit = fit_fold(_strip(view))
-    if fit.misfit < BETTER * plain and fit.length.value > LEAST * view.bar:
+    if fit.misfit < min(BETTER * plain, MISFIT) and fit.length.value > LEAST * view.bar:
         return Fold(fit.length, fit.turning, fit.ratio, (plain, fit.misfit))
-    if plain < 2.5 * PLAIN or fit.length.value <= LEAST * view.bar:
-        return none
     raise Unreadable("what stands before the forward code is neither black nor folded picture")
 
 

@@ -35,13 +35,17 @@ class FoldFit:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class _Ending:
-    """Where one descent ended: parameters, cost (as chi-squared), rms misfit, covariance from noise."""
+class _Endings:
+    """Where descents ended: free parameters (c, 4), cost as chi-squared, and the looks and turn they used."""
 
     free: Array
-    cost: float
-    misfit: float
-    covariance: Array
+    cost: Array
+    looks: list[Look]
+    turn: Turn
+
+    def best(self, count: int) -> Array:
+        """Free parameters of the best few."""
+        return self.free[np.argsort(self.cost)[:count]]
 
 
 def fit_fold(view: View) -> FoldFit:
@@ -54,34 +58,38 @@ def fit_fold(view: View) -> FoldFit:
     """
     deepest = (view.bands[0].t[-1] - view.start) / float(view.bands[0].slope(0.0))
     bands = tuple(band.shallower(max(10.0 * deepest, 0.2)) for band in view.bands)
-    view = replace(view, bands=bands)
-    looks = {share: [look_at(band, share, view.blanked) for band in bands] for share in SHARES}
-    problem = _Problem(view)
-    middle = looks[SHARES[1]]
-    sharp = with_turn(sharp_starts(view, SHARP), LENGTHS[1] * view.bar)
-    starts = problem.free(np.concatenate([sharp, bent_starts(view, middle, BENT)]))
-    screened = sorted((problem.descend(start, middle, "ramp", 5) for start in starts), key=lambda end: end.cost)
-    shared = [problem.descend(end.free, looks[s], "ramp", 5) for end in screened[:KEPT] for s in SHARES]
-    first = min(range(len(shared)), key=lambda index: shared[index].cost)
-    chosen, found = looks[SHARES[first % len(SHARES)]], problem.parameters(shared[first].free[None, :])
-    turned = problem.free(np.concatenate([with_turn(found, length * view.bar) for length in LENGTHS]))
-    endings = [*shared, *(problem.descend(one, chosen, "ramp", 6) for one in turned)]
-    nearest = min(endings, key=lambda ending: ending.cost)
-    endings += [problem.descend(nearest.free, chosen, turn, 8) for turn in TURNS]
-    best = min(endings, key=lambda ending: ending.cost)
-    weights = np.exp(-0.5 * np.array([ending.cost - best.cost for ending in endings]))
+    problem = _Problem(replace(view, bands=bands))
+    found = _explore(problem)
+    best = min(found, key=lambda ending: float(ending.cost.min()))
+    cost = np.concatenate([ending.cost for ending in found])
+    free = np.concatenate([ending.free for ending in found])
+    weights = np.exp(-0.5 * (cost - cost.min()))
     weights /= weights.sum()
-    lengths = np.array([ending.free[0] - ending.free[1] for ending in endings]) * view.bar
+    lengths = (free[:, 0] - free[:, 1]) * view.bar
     length = float(weights @ lengths)
     spread = float(weights @ (lengths - length) ** 2)
-    along = np.array([view.bar, -view.bar, 0.0, 0.0])
-    noise = float(along @ best.covariance @ along)
+    noise, misfit = problem.judge(best.best(1)[0], best.looks, best.turn)
     return FoldFit(
         Estimate(length, float(np.sqrt(noise + spread))),
-        float(weights @ np.array([ending.free[0] for ending in endings])) * view.bar,
-        float(np.exp(best.free[2])),
-        best.misfit,
+        float(weights @ free[:, 0]) * view.bar,
+        float(np.exp(best.best(1)[0, 2])),
+        misfit,
     )
+
+
+def _explore(problem: _Problem) -> list[_Endings]:
+    """Descend from the coarse searches' starts, then vary the spot, the turn's duration and its kind."""
+    view = problem.view
+    looks = {share: [look_at(band, share, view.blanked) for band in view.bands] for share in SHARES}
+    sharp = with_turn(sharp_starts(view, SHARP), LENGTHS[1] * view.bar)
+    starts = problem.free(np.concatenate([sharp, bent_starts(view, looks[SHARES[1]], BENT)]))
+    first = [problem.descend(starts, looks[share], "ramp", 5) for share in (SHARES[0], SHARES[-1])]
+    kept = np.concatenate([ending.best(KEPT) for ending in first])
+    shared = [problem.descend(kept, looks[share], "ramp", 5) for share in SHARES]
+    best = min(shared, key=lambda ending: float(ending.cost.min()))
+    found = problem.parameters(best.best(1))
+    turned = problem.free(np.concatenate([with_turn(found, length * view.bar) for length in LENGTHS]))
+    return [*shared, *(problem.descend(turned, best.looks, turn, 9) for turn in TURNS)]
 
 
 class _Problem:
@@ -115,34 +123,44 @@ class _Problem:
         departure = (np.concatenate(levels, axis=1) - self.target) / self.unit
         return np.concatenate([departure, (free - self.known) * self.pull], axis=1)
 
-    def jacobian(self, free: Array, looks: list[Look], turn: Turn, left: Array) -> Array:
-        """Slopes of the departures by each free parameter, (4, n)."""
-        return np.asarray((self.left(free[None, :] + np.diag(STEPS), looks, turn) - left) / STEPS[:, None])
+    def slopes(self, free: Array, looks: list[Look], turn: Turn, left: Array) -> Array:
+        """Slopes of the departures by each free parameter, (c, 4, n)."""
+        count = free.shape[0]
+        moved = (free[:, None, :] + np.diag(STEPS)[None, :, :]).reshape(4 * count, 4)
+        return np.asarray(
+            (self.left(moved, looks, turn).reshape(count, 4, -1) - left[:, None, :]) / STEPS[None, :, None]
+        )
 
-    def descend(self, start: Array, looks: list[Look], turn: Turn, most: int) -> _Ending:
-        """Levenberg-Marquardt from one start."""
-        free, damping = start.copy(), 1e-2
-        left = self.left(free[None, :], looks, turn)[0]
-        slopes = self.jacobian(free, looks, turn, left)
+    def descend(self, starts: Array, looks: list[Look], turn: Turn, most: int) -> _Endings:
+        """Levenberg-Marquardt from several starts side by side."""
+        free, damping = starts.copy(), np.full(starts.shape[0], 1e-2)
+        left = self.left(free, looks, turn)
+        cost = np.sum(left * left, axis=1)
         for _ in range(most):
-            normal = slopes @ slopes.T
-            move = -np.linalg.solve(normal + damping * np.diag(np.diag(normal) + 1e-9), slopes @ left)
+            slopes = self.slopes(free, looks, turn, left)
+            normal = slopes @ np.swapaxes(slopes, 1, 2)
+            held = np.einsum("cii->ci", normal) * damping[:, None] + 1e-9
+            normal += held[:, :, None] * np.eye(4)
+            move = -np.linalg.solve(normal, slopes @ left[:, :, None])[:, :, 0]
             move = np.clip(move, [-0.4, -0.15, -0.4, -0.8], [0.4, 0.15, 0.4, 0.8])
-            fresh = self.left((free + move)[None, :], looks, turn)[0]
-            gain = float(left @ left - fresh @ fresh)
-            if gain <= 0:
-                damping *= 10
-                if damping > 1e3:
-                    break
-                continue
-            free, left, damping = free + move, fresh, max(damping / 5, 1e-6)
-            slopes = self.jacobian(free, looks, turn, left)
-            if gain < 1e-2:
+            fresh = self.left(free + move, looks, turn)
+            better = np.sum(fresh * fresh, axis=1) < cost
+            free = np.where(better[:, None], free + move, free)
+            left = np.where(better[:, None], fresh, left)
+            gain = cost - np.sum(left * left, axis=1)
+            cost = cost - gain
+            damping = np.where(better, np.maximum(damping / 5, 1e-6), damping * 10)
+            if np.all(better & (gain < 1e-2)):
                 break
-        normal = slopes @ slopes.T
-        covariance = np.linalg.inv(normal + 1e-9 * np.eye(4))
+        return _Endings(free, cost, looks, turn)
+
+    def judge(self, free: Array, looks: list[Look], turn: Turn) -> tuple[float, float]:
+        """Variance of the fold's length from noise, samples squared, and rms misfit."""
+        left = self.left(free[None, :], looks, turn)
+        slopes = self.slopes(free[None, :], looks, turn, left)[0]
+        covariance = np.linalg.inv(slopes @ slopes.T + 1e-9 * np.eye(4))
         # The departures are weighted with the floor; noise alone moves the result by less.
         data = slopes[:, :-4] @ slopes[:, :-4].T * (self.noise / self.unit) ** 2
         spread = covariance @ data @ covariance
-        misfit = float(np.sqrt(np.mean((left[:-4] * self.unit) ** 2)))
-        return _Ending(free, float(left @ left), misfit, spread)
+        along = np.array([self.view.bar, -self.view.bar, 0.0, 0.0])
+        return float(along @ spread @ along), float(np.sqrt(np.mean((left[0, :-4] * self.unit) ** 2)))

@@ -161,10 +161,24 @@ def straighten(frame: Frame, warp: Warp, ruler: Ruler) -> Strip:
     maps = (along_map, across_map) if axis == "h" else (across_map, along_map)
     rows = cv2.remap(frame.luma, maps[0], maps[1], cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
     inside = (across_map >= 0) & (across_map <= limit)
-    mean, scatter, seen = _means(rows, inside)
+    mean, scatter, seen = _means(rows, _alike(rows, inside))
     if seen.sum() < 0.5 * count:
         raise Unreadable(f"the {ruler.side} ruler lies outside the frame")
     return Strip(ruler, axis, middle, rows, mean, scatter, seen, found[28:, along])
+
+
+def _alike(rows: npt.NDArray[np.float32], inside: npt.NDArray[np.bool_]) -> npt.NDArray[np.bool_]:
+    """Where rows lie in the frame, less whole rows that do not show the bars: a fold may reach into the band."""
+    usual_row = rows.mean(0) - rows.mean()
+    centred = rows - rows.mean(1)[:, None]
+    if inside.all():
+        gain = centred @ usual_row / (usual_row @ usual_row)
+    else:
+        shown = inside.astype(np.float32)
+        gain = (centred * shown) @ usual_row / np.maximum(shown @ usual_row**2, 1e-3)
+    usual = np.median(gain[inside.any(1)]) if inside.any() else 0.0
+    alike = np.abs(gain - usual) < 0.35 * abs(usual)
+    return inside if alike.all() else inside & alike[:, None]
 
 
 def _means(rows: npt.NDArray[np.float32], inside: npt.NDArray[np.bool_]) -> tuple[Array, Array, npt.NDArray[np.bool_]]:
