@@ -17,6 +17,8 @@ from patternscore.plan import Plan, Ruler, Side
 Array = npt.NDArray[np.float64]
 FAR = ("right", "bottom")
 DEPTH = 0.46  # picture fraction that a fold of 2.5 us at 8 times scan speed can show, and some more
+# Samples or lines by which an edge may leave the pace of its neighbours; lines are sampled without a filter.
+PACE = {"h": 0.2, "v": 0.5}
 NEIGHBOURS = 7  # bar edges that foretell the next one
 LEAST = 0.2  # bars: shorter folds are not told from the edge of blanking
 
@@ -81,7 +83,7 @@ def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float, late: floa
             bands.append(found[0])
             edges.append(found[1])
             length = abs(float(found[0].slope(0.0))) / _bars_across(one.strip.ruler)
-    if not any(band.walls[1] < 0.05 for band in bands):
+    if not any(band.walls[1] < max(0.05, float(band.position(start)) + 0.01) for band in bands):
         raise Unreadable(f"no ruler is seen near the {side} edge")
     return View(
         bands=tuple(bands),
@@ -115,7 +117,7 @@ def _band(plan: Plan, bars: Bars, side: Side, start: float, late: float) -> tupl
     if use.size < NEIGHBOURS + 6 or at[use[0]] > 0.16:
         return None
     bar = 1.0 / _bars_across(strip.ruler)
-    forward, first = _forward(at[use], (place - late * sign)[use], doubt[use], bar)
+    forward, first = _forward(at[use], (place - late * sign)[use], doubt[use], bar, PACE[strip.axis])
     use = use[first:]
     level = bars.level
     t = np.arange(count) + bars.lag * (np.arange(count) % 2)
@@ -140,7 +142,7 @@ def _band(plan: Plan, bars: Bars, side: Side, start: float, late: float) -> tupl
     return replace(reader, met=met, read=read), place[use]
 
 
-def _forward(at: Array, place: Array, doubt: Array, bar: float) -> tuple[Array, int]:
+def _forward(at: Array, place: Array, doubt: Array, bar: float, pace: float) -> tuple[Array, int]:
     """Forward scan near the edge, and the index of the first edge that keeps to it.
 
     Each edge is foretold from the ``NEIGHBOURS`` next ones further in, by a parabola: folded bars may look
@@ -156,7 +158,7 @@ def _forward(at: Array, place: Array, doubt: Array, bar: float) -> tuple[Array, 
     spread = np.linalg.inv(np.swapaxes(weighted, 1, 2) @ powers + np.diag([0.0, 0.0, 100.0]))
     foretold = np.einsum("kj,knj,kn->k", spread[:, 0], weighted, place[from_these])
     doubtful = np.sqrt(doubt[near] ** 2 + spread[:, 0, 0])
-    off = np.abs(place[near] - foretold) > 0.2 + 2.0 * doubtful
+    off = np.abs(place[near] - foretold) > pace + 2.0 * doubtful
     first = int(near[off][-1]) + 1 if off.any() else 0
     clear = (at >= at[first] + 1.5 * bar) & (at <= at[first] + 0.2)
     powers = np.polynomial.polynomial.polyvander(at[clear], 2)
