@@ -121,7 +121,7 @@ def _band(plan: Plan, bars: Bars, side: Side, start: float, late: float) -> tupl
     use = use[first:]
     level = bars.level
     t = np.arange(count) + bars.lag * (np.arange(count) % 2)
-    walls, content = _content(plan, strip.ruler, side, far)
+    walls, content = _content(plan, strip.ruler, strip.covered, side)
     black = -float(bars.base[0]) / float(bars.swing[0])
     shape = bars.shape
     if far:
@@ -145,17 +145,17 @@ def _band(plan: Plan, bars: Bars, side: Side, start: float, late: float) -> tupl
 def _forward(at: Array, place: Array, doubt: Array, bar: float, pace: float) -> tuple[Array, int]:
     """Forward scan near the edge, and the index of the first edge that keeps to it.
 
-    Each edge is foretold from the ``NEIGHBOURS`` next ones further in, by a parabola: folded bars may look
+    Each edge is foretold from the ``NEIGHBOURS`` next ones further in, by a cubic: folded bars may look
     like the code by chance, but they do not keep to its pace. The scan itself is a parabola through certified
     edges clear of the turn.
     """
     near = np.arange(min(at.size - NEIGHBOURS, 14))
     from_these = near[:, None] + 1 + np.arange(NEIGHBOURS)[None, :]
     away = (at[from_these] - at[near, None]) / bar
-    powers = away[:, :, None] ** np.arange(3)
+    powers = away[:, :, None] ** np.arange(4)
     weighted = powers / (doubt[from_these, None] + 0.02) ** 2
-    # A curve of a tenth of a sample over a bar squared is as much as a scan has.
-    spread = np.linalg.inv(np.swapaxes(weighted, 1, 2) @ powers + np.diag([0.0, 0.0, 100.0]))
+    # A tenth of a sample per bar squared and a thousandth per bar cubed are as much as a scan has.
+    spread = np.linalg.inv(np.swapaxes(weighted, 1, 2) @ powers + np.diag([0.0, 0.0, 1e2, 1e6]))
     foretold = np.einsum("kj,knj,kn->k", spread[:, 0], weighted, place[from_these])
     doubtful = np.sqrt(doubt[near] ** 2 + spread[:, 0, 0])
     off = np.abs(place[near] - foretold) > pace + 2.0 * doubtful
@@ -167,27 +167,25 @@ def _forward(at: Array, place: Array, doubt: Array, bar: float, pace: float) -> 
     return np.asarray(np.linalg.solve(normal, weighted.T @ place[clear])), first
 
 
-def _content(plan: Plan, ruler: Ruler, side: Side, far: bool) -> tuple[Array, Array]:
+def _content(plan: Plan, ruler: Ruler, covered: tuple[float, float], side: Side) -> tuple[Array, Array]:
     """Walls and levels of a band from the edge inwards, runs of like bars joined."""
     walls = np.asarray(ruler.boundaries)
     bits = np.asarray(ruler.bits, dtype=np.float64)
-    if far:
+    if side in FAR:
         walls, bits = 1.0 - walls[::-1], bits[::-1]
     if walls[0] > 1e-6:  # the corner belongs to the ruler that runs along this edge
         walls = np.concatenate([[0.0], walls])
-        bits = np.concatenate([[_corner(plan, ruler, side)], bits])
+        bits = np.concatenate([[_corner(plan, covered, side)], bits])
     keep = np.concatenate([[True], bits[1:] != bits[:-1]]) & (walls[:-1] < DEPTH)
     return walls[:-1][keep], bits[keep]
 
 
-def _corner(plan: Plan, ruler: Ruler, side: Side) -> float:
-    """Mean level, 0 to 1, of the crossing ruler's bars within the band of a ruler."""
+def _corner(plan: Plan, covered: tuple[float, float], side: Side) -> float:
+    """Mean level, 0 to 1, of the crossing ruler's bars within what was taken of a band."""
     crossing = next((other for other in plan.rulers if other.side == side), None)
     if crossing is None:
         return 0.0
-    low, high = ruler.band
-    margin = 0.14 * (high - low)
-    low, high = low + margin, high - margin
+    low, high = covered
     walls = np.asarray(crossing.boundaries)
     inside = np.maximum(np.minimum(walls[1:], high) - np.maximum(walls[:-1], low), 0.0)
     total = float(inside.sum())

@@ -28,6 +28,7 @@ USED = 0.72  # part of the band's depth that is averaged; the rest is margin for
 FEWEST = 4  # rows that a mean needs
 MOST_TURNS = 6
 SETTLED = 0.02  # samples: edges that move less than this need no further turn
+CLEAR = 2.5  # samples between the edge of blanking and a bar edge that is not disturbed by it
 REACH = 5  # samples either side of its expected place within which an edge is sought
 
 
@@ -41,6 +42,8 @@ class Strip:
         "h": along the line, in samples; "v": down the frame, in lines.
     across : float
         Middle of the band, picture fraction across the ruler's axis.
+    covered : (float, float)
+        Picture fractions across between which its rows were taken.
     rows : (depth, n) float32
         The band's rows, IRE.
     mean : (n,) float64
@@ -56,6 +59,7 @@ class Strip:
     ruler: Ruler
     axis: Axis
     across: float
+    covered: tuple[float, float]
     rows: npt.NDArray[np.float32]
     mean: Array
     scatter: Array
@@ -161,10 +165,14 @@ def straighten(frame: Frame, warp: Warp, ruler: Ruler) -> Strip:
     maps = (along_map, across_map) if axis == "h" else (across_map, along_map)
     rows = cv2.remap(frame.luma, maps[0], maps[1], cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
     inside = (across_map >= 0) & (across_map <= limit)
-    mean, scatter, seen = _means(rows, _alike(rows, inside))
+    used = _alike(rows, inside)
+    mean, scatter, seen = _means(rows, used)
     if seen.sum() < 0.5 * count:
         raise Unreadable(f"the {ruler.side} ruler lies outside the frame")
-    return Strip(ruler, axis, middle, rows, mean, scatter, seen, found[28:, along])
+    taken = steps[used.mean(1) > 0.5, 0] if used.any() else steps[:, 0]
+    wide = (ruler.band[1] - ruler.band[0]) / depth
+    covered = (middle + (taken.min() - 0.5) * wide, middle + (taken.max() + 0.5) * wide) if taken.size else ruler.band
+    return Strip(ruler, axis, middle, covered, rows, mean, scatter, seen, found[28:, along])
 
 
 def _alike(rows: npt.NDArray[np.float32], inside: npt.NDArray[np.bool_]) -> npt.NDArray[np.bool_]:
@@ -206,13 +214,16 @@ def transitions(ruler: Ruler) -> tuple[Array, Array]:
     return index, np.where(bits[index], 1.0, -1.0)
 
 
-def read_bars(strip: Strip) -> Bars:
+def read_bars(strip: Strip, shown: tuple[float, float] = (-math.inf, math.inf)) -> Bars:
     """Find every bar edge of a straightened ruler.
 
     Parameters
     ----------
     strip : Strip
         The ruler's band.
+    shown : (float, float)
+        Frame coordinates between which the picture can be shown: where blanking ends and starts again. Bar
+        edges close to these are not read.
 
     Raises
     ------
@@ -223,7 +234,7 @@ def read_bars(strip: Strip) -> Bars:
     at = np.asarray(strip.ruler.boundaries)[index]
     count = strip.mean.size
     expected = strip.expected[index]
-    inside = (expected > 0.6) & (expected < count - 1.6)
+    inside = (expected > max(0.6, shown[0] + CLEAR)) & (expected < min(count - 1.6, shown[1] - CLEAR))
     inside &= strip.seen[np.clip(np.rint(expected), 0, count - 1).astype(int)]
     at, sign, expected = at[inside], sign[inside], expected[inside]
     if at.size < 12:

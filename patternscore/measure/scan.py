@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -89,7 +90,9 @@ def _blanking(findings: Findings, frame: Frame, located: Located) -> None:
 
 def _read_axis(findings: Findings, frame: Frame, located: Located, axis: Axis, shape: StepShape | None) -> None:
     keys = [*_fold_keys(axis), *_crush_keys(axis), f"linearity_{axis}", SIZE[axis], f"centre_{axis}"]
-    bars, reasons = _all_bars(frame, located, axis)
+    raster = frame.raster
+    nominal = (raster.left, raster.right) if axis == "h" else (raster.top, raster.bottom)
+    bars, reasons = _all_bars(frame, located, axis, nominal)
     try:
         if not bars:
             raise Unreadable(reasons[0])
@@ -97,8 +100,6 @@ def _read_axis(findings: Findings, frame: Frame, located: Located, axis: Axis, s
     except Unreadable as reason:
         findings.miss(reason.reason, *keys)
         return
-    raster = frame.raster
-    nominal = (raster.left, raster.right) if axis == "h" else (raster.top, raster.bottom)
     folds = _folds(findings, frame, located, bars, scan, nominal, shape)
     last = (frame.samples if axis == "h" else frame.rows) - 0.5
     starts = [max(nominal[0], -0.5), min(nominal[1], last)]
@@ -112,12 +113,13 @@ def _read_axis(findings: Findings, frame: Frame, located: Located, axis: Axis, s
     _size(findings, scan, nominal)
 
 
-def _all_bars(frame: Frame, located: Located, axis: Axis) -> tuple[list[Bars], list[str]]:
+def _all_bars(frame: Frame, located: Located, axis: Axis, nominal: tuple[float, float]) -> tuple[list[Bars], list[str]]:
     bars, reasons = [], []
+    shown = nominal if axis == "h" else (-math.inf, math.inf)
     for ruler in located.plan.rulers:
         if axis_of(ruler) == axis:
             try:
-                bars.append(read_bars(straighten(frame, located.warp, ruler)))
+                bars.append(read_bars(straighten(frame, located.warp, ruler), shown))
             except Unreadable as reason:
                 reasons.append(reason.reason)
     return bars, reasons
