@@ -11,7 +11,7 @@ import numpy.typing as npt
 from patternscore.errors import Unreadable
 from patternscore.frame import Frame
 from patternscore.located import Located
-from patternscore.measure.patches import cut_cores
+from patternscore.measure.flats import flat_areas
 from patternscore.plan import Edge
 from patternscore.reading import Estimate
 
@@ -124,10 +124,9 @@ def _across_rows(rows: Array, cuts: Array) -> Array:
 
 
 def _level(frame: Frame, located: Located) -> Estimate:
-    plan = located.plan
-    found = []
-    for patches in (plan.field, plan.flats, plan.steps):
-        cores = cut_cores(frame, located, patches)
+    areas = flat_areas(frame, located)
+    found: list[float] = []
+    for cores in (areas.field, areas.flats, areas.steps):
         count = cores.levels.shape[1] // 2 * 2
         if not len(cores) or count < 4:
             continue

@@ -8,8 +8,8 @@ from typing import Any
 import numpy as np
 
 from patternscore.measure.edge import EdgeTrace
+from patternscore.measure.flats import flat_areas
 from patternscore.measure.grid import GridTrace
-from patternscore.measure.patches import cut_cores
 from patternscore.measure.transfer import Transfer
 from patternscore.report.canvas import EXPECTED, FAINT, INK, MEASURED, OTHER, WRONG, dress, empty, new_figure, save
 from patternscore.report.figures import reading_text
@@ -28,9 +28,9 @@ def card_picture(scored: Scored, path: Path | str) -> None:
     path : Path
         ``.png``, ``.svg`` or ``.pdf``.
     """
-    figure = new_figure(16.0, 11.0)
+    figure = new_figure(16.0, 12.0)
     grid = figure.add_gridspec(
-        3, 4, left=0.045, right=0.985, top=0.9, bottom=0.055, hspace=0.4, wspace=0.27, height_ratios=(1, 1, 0.9)
+        3, 4, left=0.045, right=0.985, top=0.9, bottom=0.055, hspace=0.4, wspace=0.27, height_ratios=(1, 1, 1.15)
     )
     _heading(figure, scored)
     _frame_panel(figure.add_subplot(grid[:2, :2]), scored)
@@ -69,8 +69,8 @@ def _frame_panel(axes: Any, scored: Scored) -> None:
     for edge in plan.edges:
         run = warp.to_frame(np.linspace(edge.start, edge.end, 9))
         axes.plot(*run.T, color=MEASURED if edge.axis == "h" else OTHER, linewidth=1.6)
-    for patches in (plan.steps, plan.flats, plan.field):
-        cores = cut_cores(frame, located, patches)
+    areas = flat_areas(frame, located)
+    for cores in (areas.steps, areas.flats, areas.field):
         tall, wide = cores.levels.shape[1:]
         for x, y in zip(cores.left, cores.top, strict=True):
             box = np.array([(0, 0), (wide - 1, 0), (wide - 1, tall - 1), (0, tall - 1), (0, 0)]) + (x, y)
@@ -108,7 +108,7 @@ def _spread_panel(axes: Any, scored: Scored) -> None:
     axes.axhline(100.0, color=FAINT, linewidth=0.9)
     axes.axhline(0.0, color=FAINT, linewidth=0.9)
     axes.plot(1e3 * trace.profile_us, 100 * trace.profile, ".", color=EXPECTED, markersize=2.5)
-    axes.plot(1e3 * trace.spread.times, 100 * trace.spread.level, color=MEASURED, linewidth=1.4)
+    axes.plot(1e3 * trace.spread.times, 100 * trace.spread.levels, color=MEASURED, linewidth=1.4)
     dress(axes, "Edge spread", f"ns      {_said(scored, 'rise_time')}", f"% of the step   {_said(scored, 'overshoot')}")
     axes.set_xlim(-700, 1500)
     return None
@@ -186,9 +186,6 @@ def _grid_panel(axes: Any, scored: Scored) -> None:
         "   ".join(_said(scored, key) for key in ("position_error", "rotation")),
         "% of picture height",
     )
-    axes.text(
-        0.99, 1.02, _said(scored, "position_error"), ha="right", fontsize=8.5, color=INK, transform=axes.transAxes
-    )
     return None
 
 
@@ -217,9 +214,9 @@ def _step_panel(axes: Any, scored: Scored) -> None:
     trace: Transfer | None = scored.findings.traces.get("transfer")
     if trace is None:
         return empty(axes, "Steps apart", scored.card.missing.get("gamma", "not read"))
-    wanted = np.diff(trace.curve(trace.nominal))
-    apart = np.diff(trace.measured) / np.maximum(wanted, 0.05) * 100
-    middles = (trace.nominal[1:] + trace.nominal[:-1]) / 2
+    nominal, first = np.unique(trace.nominal, return_index=True)
+    apart = 100 * np.diff(trace.measured[first]) / np.maximum(np.diff(trace.curve(nominal)), 0.05)
+    middles = (nominal[1:] + nominal[:-1]) / 2
     axes.axhline(100, color=EXPECTED, linewidth=0.9, linestyle="--")
     axes.vlines(middles, 0, np.clip(apart, -20, 220), color=FAINT, linewidth=1.5)
     low = apart < 50

@@ -23,6 +23,8 @@ COLUMNS = (
     "rotation",
 )  # fmt: skip
 _CELL = 15
+_STILL = 0.05  # of movement: less is no change worth a column
+_FEWEST = 3
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,6 +49,8 @@ def chosen_columns(cards: Sequence[Card], room: int, first: str | None = None) -
     """Readings to show: those that change most against their noise, in the usual order."""
     worth = {key: _movement(cards, key) for key in COLUMNS if any(key in card for card in cards)}
     order = sorted(worth, key=lambda key: -worth[key])
+    moving = [key for key in order if worth[key] > _STILL]
+    order = moving if len(moving) >= _FEWEST else order[:_FEWEST]
     kept = set(order[:room])
     if first is not None and first in KEYS:
         kept = {first, *[key for key in order if key != first][: room - 1]}
@@ -66,10 +70,13 @@ def _movement(cards: Sequence[Card], key: str) -> float:
 
 
 def best_of(cards: Sequence[Card], key: str, limits: Limits) -> set[int]:
-    """Rows whose value of a reading is the best; none where all are alike."""
+    """Rows whose value of a reading is the best; none where no two differ by more than noise."""
     known = {row: card[key].value for row, card in enumerate(cards) if key in card and not card[key].doubt}
     limit = limits.get(key)
-    if len(known) < 2 or max(known.values()) - min(known.values()) < 10.0 ** -KEYS[key].decimals / 2:
+    if len(known) < 2:
+        return set()
+    low, high = min(known, key=lambda row: known[row]), max(known, key=lambda row: known[row])
+    if not cards[high][key].reading.differs_from(cards[low][key].reading):
         return set()
     if limit is not None and limit.target is not None:
         target = limit.target
