@@ -3,17 +3,19 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
 from patternscore.errors import Unreadable
-from patternscore.measure.profile import FEWEST, LOWEST, Strip
-from patternscore.measure.stepbasis import BINS
+from patternscore.measure.profile import FEWEST, LOWEST, Strip, slope_of, table
 
 Array = npt.NDArray[np.float64]
 ALIKE = 0.15  # part of the step within which edges of one block are taken to have the same levels
+MOST_CUTS = 3  # windows are cut again while they were off by more than this many samples:
+CLOSE = 1.0
 DEGREE = 3  # of the run of an edge: turn, bow and the bend of a non-linear sweep
 
 
@@ -43,46 +45,61 @@ class Alignment:
     blur: float
 
 
-def run_basis(rows: npt.NDArray[Any], parity: bool) -> Array:
+def run_basis(rows: npt.NDArray[Any], degree: int, parity: bool) -> Array:
     """Orthonormal columns for the smooth run of an edge over its rows, and the difference of the fields."""
+    if rows[-1] - rows[0] == len(rows) - 1:
+        return _unbroken_basis(len(rows), int(rows[0]) % 2, degree, parity)
+    return _basis(rows, degree, parity)
+
+
+@lru_cache(maxsize=64)
+def _unbroken_basis(count: int, first: int, degree: int, parity: bool) -> Array:
+    return _basis(np.arange(first, first + count), degree, parity)
+
+
+def _basis(rows: npt.NDArray[Any], degree: int, parity: bool) -> Array:
     u = (rows - rows.mean()) / max(np.ptp(rows) / 2.0, 1.0)
-    columns = [u**power for power in range(DEGREE + 1)]
+    columns = [u**power for power in range(degree + 1)]
     if parity:
         columns.append(1.0 - 2.0 * (rows % 2))
     return np.asarray(np.linalg.qr(np.stack(columns, axis=1))[0])
 
 
 def settle(strip: Strip) -> None:
-    """Find polarity, levels and a first run of every edge by the area under its step; changes the strip.
+    """Cut the windows; find polarity, levels and a first run of every edge by the area under its step.
 
     Raises
     ------
     Unreadable
         If there is no step to be seen.
     """
-    basis = run_basis(strip.rows, parity=False)[:, :3]
-    for first in (True, False):
-        times, levels = strip.windows()
+    for round_ in range(MOST_CUTS):
+        strip.cut()
         side = max(int(0.3 * min(strip.left, strip.right)), 2)
-        before = levels[..., :side].mean(axis=(1, 2), dtype=np.float64)
-        after = levels[..., -side:].mean(axis=(1, 2), dtype=np.float64)
-        strip.sign = np.where(after >= before, 1.0, -1.0)
-        strip.middle, strip.step = _levels(before, after)
+        before = strip.levels[..., :side].sum(axis=2) / side
+        after = strip.levels[..., -side:].sum(axis=2) / side
+        first, last = before.mean(axis=1, dtype=np.float64), after.mean(axis=1, dtype=np.float64)
+        strip.sign = np.where(last >= first, 1.0, -1.0)
+        strip.middle, strip.step = _levels(first, last)
         if np.min(strip.step) < LOWEST:
             raise Unreadable("there is no step to be seen where the plan has an edge")
-        if first:
-            keep = _whole_rows(strip, levels, side)
-            times, levels = times[:, keep], levels[:, keep]
-            basis = run_basis(strip.rows, parity=False)[:, :3]
-        values = strip.signed(levels)
-        # The step lies where a sharp one would leave the same area under the window.
-        area = values.sum(axis=2, dtype=np.float64)
-        ends = (times[..., -1].astype(np.float64) + times[..., 0]) / 2
-        shift = ends - area
-        limit = 0.5 * min(strip.left, strip.right)
-        smooth = _robust_run(np.clip(shift, -limit, limit), basis)
-        strip.position = strip.position + smooth
+        if round_ == 0:
+            _whole_rows(strip, after - before)
+        moved = _by_area(strip)
+        strip.position = strip.position + moved
+        if np.abs(moved).max() < CLOSE:
+            break
     _inside(strip)
+
+
+def _by_area(strip: Strip) -> Array:
+    """Move of each edge to where a sharp step would leave the same area under the window; a smooth run."""
+    width = strip.levels.shape[2]
+    scale = (strip.sign / strip.step)[:, None]
+    area = (strip.levels.sum(axis=2) - width * strip.middle[:, None]) * scale
+    shift = strip.start + (width - 1) / 2.0 - strip.position - area
+    limit = 0.5 * min(strip.left, strip.right)
+    return _robust_run(np.clip(shift, -limit, limit), run_basis(strip.rows, 2, False))
 
 
 def _levels(before: Array, after: Array) -> tuple[Array, Array]:
@@ -95,24 +112,29 @@ def _levels(before: Array, after: Array) -> tuple[Array, Array]:
     return middle, step
 
 
-def _whole_rows(strip: Strip, levels: Any, side: int) -> npt.NDArray[np.bool_]:
+def _whole_rows(strip: Strip, rise: Array) -> None:
     """Keep the rows that have the whole step: near its ends an edge fades into what lies beyond."""
-    rise = levels[..., -side:].mean(axis=2) - levels[..., :side].mean(axis=2)
     part = np.mean(rise * (strip.sign / strip.step)[:, None], axis=0)
-    off = np.abs(part / np.median(part) - 1.0)
-    keep = off < max(0.04, 6.0 * float(np.median(off)))
+    off = np.abs(part / _median(part) - 1.0)
+    keep = off < max(0.04, 6.0 * _median(off))
     if np.count_nonzero(keep) < FEWEST:
         raise Unreadable("the step differs too much along the edge")
-    strip.rows, strip.position = strip.rows[keep], strip.position[:, keep]
-    return np.asarray(keep)
+    if not keep.all():
+        strip.keep(keep)
+
+
+def _median(values: Array) -> float:
+    return float(np.sort(values)[len(values) // 2])
 
 
 def _robust_run(shift: Array, basis: Array) -> Array:
     """Smooth run through one shift a row, rows that lie far off left out."""
     smooth = (shift @ basis) @ basis.T
-    rest = np.abs(shift - smooth)
-    limit = np.maximum(4.0 * 1.4826 * np.median(rest, axis=1, keepdims=True), 0.3)
-    held = np.where(rest > limit, smooth, shift)
+    rest = shift - smooth
+    limit = 3.0 * np.sqrt(np.mean(rest**2, axis=1, keepdims=True)) + 0.1
+    if np.all(np.abs(rest) < limit):
+        return np.asarray(smooth)
+    held = np.where(np.abs(rest) > limit, smooth, shift)
     return np.asarray((held @ basis) @ basis.T)
 
 
@@ -124,16 +146,16 @@ def _inside(strip: Strip) -> None:
     if np.count_nonzero(keep) < FEWEST:
         raise Unreadable("the edge lies too near the side of the frame")
     if not keep.all():
-        strip.rows, strip.position = strip.rows[keep], strip.position[:, keep]
+        strip.keep(keep)
 
 
-def refine(strip: Strip, first: int, model: Array, *, jitter: bool) -> Alignment:
+def refine(strip: Strip, model: Array, *, jitter: bool) -> Alignment:
     """Shift every row into step with a model of the profile; changes the strip.
 
     Parameters
     ----------
     model : (edges, bins) array
-        Modelled profiles on bins from ``first``, fraction of the step about its middle.
+        Modelled profiles, fraction of the step about its middle.
     jitter : bool
         Whether rows may also move on their own (along the line), or only along a smooth run.
 
@@ -142,25 +164,17 @@ def refine(strip: Strip, first: int, model: Array, *, jitter: bool) -> Alignment
     One Gauss-Newton step. A row's own shift is measured by all its edges together and shrunk by what noise
     alone would make of it, so that without jitter the rows keep to the smooth run.
     """
-    times, levels = strip.windows()
-    values = strip.signed(levels)
-    slope = np.gradient(model, 1.0 / BINS, axis=1).astype(np.float32).ravel()
-    nearest = np.rint(times * np.float32(BINS))
-    off = times - nearest * np.float32(1.0 / BINS)
-    index = np.clip(nearest.astype(np.int64) - first, 0, model.shape[1] - 1)
-    index += (np.arange(len(model)) * model.shape[1])[:, None, None]
-    rate = slope[index]
-    rest = values - model.astype(np.float32).ravel()[index] - rate * off
-    power = np.einsum("erw,erw->er", rate, rate, dtype=np.float64)
-    moved = -np.einsum("erw,erw->er", rest, rate, dtype=np.float64) / np.maximum(power, 1e-9)
-    basis = run_basis(strip.rows, parity=jitter)
+    index, off = strip.bins()
+    rate = table(slope_of(model))[index]
+    rest = strip.signed(strip.levels) - table(model)[index] - rate * off
+    power = np.einsum("erw,erw->er", rate, rate).astype(np.float64)
+    moved = -np.einsum("erw,erw->er", rest, rate) / np.maximum(power, 1e-9)
+    basis = run_basis(strip.rows, DEGREE, jitter)
     smooth = (moved @ basis) @ basis.T
     left_over = moved - smooth
     weight = power / power.sum(axis=0)
-    if strip.shifts.shape != (len(strip.rows),):
-        strip.shifts = np.zeros(len(strip.rows))
     own = strip.shifts + (left_over * weight).sum(axis=0)
-    variance = _noise(rest, moved, rate)
+    variance = _noise(rest, moved, power)
     if not jitter:
         strip.field_shift += _field_shift(strip, rest, rate)
     row_variance = variance / power.sum(axis=0)
@@ -181,19 +195,17 @@ def refine(strip: Strip, first: int, model: Array, *, jitter: bool) -> Alignment
 
 def _field_shift(strip: Strip, rest: Any, rate: Any) -> float:
     """How much later the edges lie in the odd lines than in the even ones, lines; across only."""
-    whole = np.floor(strip.position).astype(np.int64)
-    parity = (whole[..., None] + np.arange(-strip.left, strip.right + 2)) % 2 == 1
+    parity = (strip.start[..., None] + np.arange(strip.levels.shape[2])) % 2 == 1
     against, power = rest * rate, rate * rate
     odd = -float(against[parity].sum()) / max(float(power[parity].sum()), 1e-9)
     even = -float(against[~parity].sum()) / max(float(power[~parity].sum()), 1e-9)
     return odd - even
 
 
-def _noise(rest: Any, moved: Array, rate: Any) -> float:
+def _noise(rest: Any, moved: Array, power: Array) -> float:
     """Variance of a sample about the model once every row has been moved into step."""
-    gone = float(np.sum(moved**2 * np.einsum("erw,erw->er", rate, rate, dtype=np.float64)))
-    total = float(np.einsum("erw,erw->", rest, rest, dtype=np.float64))
-    return max(total - gone, 1e-12) / max(rest.size - moved.size, 1)
+    flat = rest.ravel()
+    return max(float(flat @ flat) - float(np.sum(moved**2 * power)), 1e-12) / max(rest.size - moved.size, 1)
 
 
 def _jitter_sigma(excess: float, row_variance: float, count: int) -> float:

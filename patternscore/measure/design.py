@@ -8,12 +8,13 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from patternscore.measure.profile import Pile, Strip
+from patternscore.measure.profile import Pile, Strip, slope_of
 from patternscore.measure.stepbasis import BINS, sample_mean, step_basis
 
 Array = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
 Single = npt.NDArray[np.float32]
+Index = npt.NDArray[np.int64]
 
 NEAR = 6 * BINS  # bins each side of an edge that are taken one by one; further off whole samples will do
 OFFSET = 0.007  # prior sigma of a profile's offset, fraction of the step: tilt, hum, an error of the levels
@@ -32,45 +33,50 @@ class Neighbour:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Design:
-    """Profiles as data, with the matrix that models them.
+class Layout:
+    """Which rows stand for the profiles of some strips, and what each edge's neighbours leave in its profile.
 
     Rows are, first, fine bins about the edge, a mean over all edges; then bins of a sample further off, edge by
     edge, for there neighbours leave something else in each.
 
     Attributes
     ----------
-    data, weight : (rows,) float64
-        Fraction of the step about its middle; root of the inverse variance.
-    matrix : (rows, 2 n) float32
-        From the real and imaginary parts of the transfer function.
-    constant : (rows,) float64
-        What is added to that.
-    nuisance : (k, rows) float64
-        What else may lie in the profiles, with prior sigmas ``allowed`` (k,).
+    first, bins : int
+        Bin of the first value of a profile, and their number.
+    near, coarse : (k,) int
+        Places in the profile of the fine bins, and of the middles of the coarse ones.
+    share : (edges, near) float64
+        Weight of each edge in the fine rows.
+    signs, lags : (edges,) float64
+        Polarity of each edge, and bins from the first of its block.
     """
 
     first: int
     bins: int
-    near: npt.NDArray[np.int64]
-    coarse: npt.NDArray[np.int64]
+    near: Index
+    coarse: Index
     share: Array
     neighbours: tuple[Neighbour, ...]
-    data: Array
-    weight: Array
-    matrix: Single
-    constant: Array
-    nuisance: Array
-    allowed: Array
     signs: Array
     lags: Array
 
     @property
-    def edges(self) -> int:
-        """Number of edges."""
-        return len(self.share)
+    def even(self) -> bool:
+        """Whether every edge counts alike in the fine rows."""
+        return bool(np.ptp(self.share) == 0.0)
 
-    def rows_of(self, profiles: Array, moves: npt.NDArray[np.int64], pad: int) -> Array:
+    def reach(self, pad: int) -> int:
+        """Samples each way from an edge that profiles padded by some bins ask for."""
+        side = max(-self.first, self.first + self.bins) + pad
+        longest = max((abs(part.lag) for part in self.neighbours), default=0.0)
+        return int(np.ceil((side + max(longest, max(*BEFORE, *AFTER) * BINS + np.ptp(self.lags))) / BINS)) + 1
+
+    def rows_of(self, profiles: Array) -> Array:
+        """Rows of some sets of profiles, (k, edges, bins): (k, rows)."""
+        fine = np.einsum("eb,keb->kb", self.share, profiles[..., self.near])
+        return np.hstack([fine, sample_mean(profiles, axis=2)[..., self.coarse].reshape(len(profiles), -1)])
+
+    def rows_moved(self, profiles: Array, moves: Index, pad: int) -> Array:
         """Rows of profiles shifted later by some bins.
 
         Parameters
@@ -86,40 +92,90 @@ class Design:
         mean = sample_mean(profiles, axis=1)
         near = self.near[None, :] + pad - moves[:, None]
         coarse = self.coarse[None, :] + pad - moves[:, None]
-        fine = np.einsum("eb,ekb->kb", self.share, profiles[:, near])
+        if self.even:
+            fine = profiles.mean(axis=0)[near]
+        else:
+            fine = np.einsum("eb,ekb->kb", self.share, profiles[:, near])
         return np.hstack([fine, mean[:, coarse].transpose(1, 0, 2).reshape(len(moves), -1)])
 
     def profiles(self, edge: Array, pad: int = 0) -> Array:
-        """Profiles about each edge, from the response to one edge on all bins of the basis."""
-        origin = step_basis().origin + self.first - pad
-        reach = np.arange(self.bins + 2 * pad) + origin
-        total = np.repeat(edge[reach][None], self.edges, axis=0)
-        for part in self.neighbours:
-            total[part.edge] += part.factor * (_at(edge, reach, part.lag) - 0.5 * np.sign(part.lag))
+        """Profiles about each edge, from the response to one edge (``edge_of``): (edges, pad + bins + pad)."""
+        bins = np.arange(self.bins + 2 * pad) + (len(edge) // 2 + self.first - pad)
+        total = np.repeat(edge[bins][None], len(self.signs), axis=0)
+        if self.neighbours:
+            lags = np.array([part.lag for part in self.neighbours])
+            factors = np.zeros((len(self.signs), len(lags)))
+            for k, part in enumerate(self.neighbours):
+                factors[part.edge, k] = part.factor
+            total += factors @ (_at(edge, bins, lags) - 0.5 * np.sign(lags)[:, None])
         return total
 
     def beyond(self, edge: Array) -> tuple[Array, Array]:
         """Profiles that steps beyond the clear part would leave, (k, edges, bins), and their prior sigmas."""
-        reach = np.arange(self.bins) + step_basis().origin + self.first
+        bins = np.arange(self.bins) + (len(edge) // 2 + self.first)
         left, right = -self.first, self.first + self.bins - 1
-        places = [self.lags + left + d * BINS for d in BEFORE]
-        places += [self.lags - self.lags[-1] - right - d * BINS for d in AFTER]
-        columns = np.zeros((len(places), self.edges, self.bins))
-        for k, lags in enumerate(places):
-            for e, lag in enumerate(lags):
-                columns[k, e] = self.signs[e] * (_at(edge, reach, lag) - 0.5 * np.sign(lag))
-        return columns, np.full(len(places), BEYOND)
+        lags = np.concatenate(
+            [
+                self.lags + left + BINS * np.array(BEFORE)[:, None],
+                self.lags - self.lags[-1] - right - BINS * np.array(AFTER)[:, None],
+            ]
+        )
+        columns = _at(edge, bins, lags.ravel()) - 0.5 * np.sign(lags.ravel())[:, None]
+        columns = columns.reshape(*lags.shape, -1) * self.signs[:, None]
+        return columns, np.full(len(lags), BEYOND)
 
 
-def _at(edge: Array, bins: npt.NDArray[np.int64], lag: float) -> Array:
-    """Values some bins later, between bins on a straight line; the plateau where the basis ends."""
-    whole = int(np.floor(lag))
-    part = lag - whole
-    low = np.clip(bins + whole, 0, len(edge) - 2)
-    return np.asarray((1.0 - part) * edge[low] + part * edge[low + 1])
+@dataclass(frozen=True, slots=True, eq=False)
+class Design:
+    """Profiles as data, with the matrix that models them.
+
+    Attributes
+    ----------
+    data, weight : (rows,) float64
+        Fraction of the step about its middle; root of the inverse variance.
+    matrix : (rows, 2 n) float32
+        From the real and imaginary parts of the transfer function.
+    constant : (rows,) float64
+        What is added to that.
+    nuisance : (k, rows) float64
+        What else may lie in the profiles, with prior sigmas ``allowed`` (k,).
+    """
+
+    layout: Layout
+    data: Array
+    weight: Array
+    matrix: Single
+    constant: Array
+    nuisance: Array
+    allowed: Array
 
 
-def design(strips: list[Strip], pile: Pile, code: float, residue: float) -> Design:
+def _at(edge: Array, bins: Index, lags: Array) -> Array:
+    """Values some lags later, (lags, bins); between bins on a straight line, the plateau where the edge ends."""
+    whole = np.floor(lags)
+    part = (lags - whole)[:, None]
+    low = bins + whole.astype(np.int64)[:, None]
+    np.clip(low, 0, len(edge) - 2, out=low)
+    return np.asarray(edge[low] * (1.0 - part) + edge[low + 1] * part)
+
+
+def lay_out(strips: list[Strip], pile: Pile, *, neighbours: bool = True) -> Layout:
+    """Choose the rows for some strips."""
+    bins = pile.mean.shape[1]
+    span = min(NEAR, -pile.first, bins - 1 + pile.first)
+    half = BINS // 2
+    near = np.arange(-span, span + 1) - pile.first
+    before = np.arange(-span - 1 - half - pile.first, half - 1, -BINS)[::-1]
+    after = np.arange(span + 1 + half - pile.first, bins - half, BINS)
+    sound = ((pile.count > 0) & ~pile.clipped)[:, near]
+    share = sound / np.maximum(sound.sum(axis=0), 1)
+    found, signs, lags = _neighbours(strips)
+    return Layout(
+        pile.first, bins, near, np.concatenate([before, after]), share, found if neighbours else (), signs, lags
+    )
+
+
+def design(layout: Layout, pile: Pile, code: float, residue: float, before: Design | None = None) -> Design:
     """Set up the fit of profiles.
 
     Parameters
@@ -128,26 +184,27 @@ def design(strips: list[Strip], pile: Pile, code: float, residue: float) -> Desi
         One code, fraction of the step.
     residue : float
         Share of the variance of rounding that is still in the profiles.
+    before : Design, optional
+        An earlier one of the same strips, whose matrix may do.
     """
-    bins = pile.mean.shape[1]
-    side = min(-pile.first, bins - 1 + pile.first)
-    span = min(NEAR, side)
-    near = np.arange(-span, span + 1) - pile.first
-    half = BINS // 2
-    low, high = -span - 1 - half, span + 1 + half
-    coarse = np.concatenate(
-        [np.arange(low - pile.first, half - 1, -BINS)[::-1], np.arange(high - pile.first, bins - half, BINS)]
+    data, weight = _rows(layout, pile, code, residue)
+    if before is None or not _alike(before.layout, layout):
+        matrix, constant = _matrix(layout)
+    else:
+        matrix, constant = before.matrix, before.constant
+    nuisance, allowed = _nuisance(layout, pile, code)
+    return Design(layout, data, weight, matrix, constant, nuisance, allowed)
+
+
+def _alike(one: Layout, other: Layout) -> bool:
+    return (
+        one.bins == other.bins
+        and np.array_equal(one.share, other.share)
+        and all(
+            abs(a.lag - b.lag) < 0.05 and abs(a.factor - b.factor) < 1e-3
+            for a, b in zip(one.neighbours, other.neighbours, strict=True)
+        )
     )
-    sound = (pile.count > 0) & ~pile.clipped
-    share = sound[:, near] / np.maximum(sound[:, near].sum(axis=0), 1)
-    neighbours, signs, lags = _neighbours(strips)
-    data, weight = _rows(pile, sound, near, coarse, share, code, residue)
-    matrix, constant = _matrix(pile.first, near, coarse, share, neighbours)
-    nuisance, allowed = _nuisance(pile, near, coarse, share, signs, code)
-    return Design(
-        pile.first, bins, near, coarse, share, neighbours, data, weight, matrix, constant, nuisance, allowed,
-        signs, lags,
-    )  # fmt: skip
 
 
 def _neighbours(strips: list[Strip]) -> tuple[tuple[Neighbour, ...], Array, Array]:
@@ -168,7 +225,7 @@ def _neighbours(strips: list[Strip]) -> tuple[tuple[Neighbour, ...], Array, Arra
     return tuple(found), np.concatenate(signs), np.concatenate(lags)
 
 
-def _coarse_weights(values: Array, coarse: npt.NDArray[np.int64]) -> Any:
+def _coarse_sum(values: Array, coarse: Index) -> Any:
     """Sum over the sample about each coarse bin, the outer bins counting half."""
     half = BINS // 2
     total = (values[:, coarse - half] + values[:, coarse + half]) / 2
@@ -177,65 +234,83 @@ def _coarse_weights(values: Array, coarse: npt.NDArray[np.int64]) -> Any:
     return total
 
 
-def _rows(
-    pile: Pile, sound: Any, near: Any, coarse: Any, share: Array, code: float, residue: float
-) -> tuple[Array, Array]:
+def _rows(layout: Layout, pile: Pile, code: float, residue: float) -> tuple[Array, Array]:
     """Data and weights of all rows."""
+    near, coarse, share = layout.near, layout.coarse, layout.share
+    sound = (pile.count > 0) & ~pile.clipped
     whole = np.maximum(pile.count, 1.0)
     fine = (pile.mean[:, near] * share).sum(axis=0)
     worth = 1.0 / np.maximum((share**2 / whole[:, near]).sum(axis=0), 1e-9)
-    rise = np.abs(np.gradient(fine)) / max(code, 1e-9)
-    far = _coarse_weights(pile.mean, coarse) / BINS
-    far_worth = BINS**2 / _coarse_weights(1.0 / whole, coarse)
-    far_rise = np.abs(np.gradient(far, axis=1)) / max(code, 1e-9)
-    keep = np.concatenate([share.sum(axis=0) > 0, (_coarse_weights(sound * 1.0, coarse) > BINS - 0.1).ravel()])
-    data = np.concatenate([fine, far.ravel()])
+    rise = slope_of(fine) / (BINS * max(code, 1e-9))
+    far = _coarse_sum(pile.mean, coarse) / BINS
+    far_worth = BINS**2 / _coarse_sum(1.0 / whole, coarse)
+    far_rise = slope_of(far) / (BINS * max(code, 1e-9))
+    keep = np.concatenate([share.sum(axis=0) > 0, (_coarse_sum(sound * 1.0, coarse) > BINS - 0.1).ravel()])
     count = np.concatenate([worth, far_worth.ravel()])
     # Over a bin in which the level runs through several codes, rounding errors cancel.
     rounding = residue * code**2 / 12.0 / (1.0 + np.concatenate([rise, far_rise.ravel()]) ** 2)
     variance = max(pile.noise, 0.1 * code) ** 2 / count + rounding + 1e-10
-    return data, np.where(keep, 1.0 / np.sqrt(variance), 0.0)
+    return np.concatenate([fine, far.ravel()]), np.where(keep, 1.0 / np.sqrt(variance), 0.0)
 
 
-def _matrix(
-    first: int, near: Any, coarse: Any, share: Array, neighbours: tuple[Neighbour, ...]
-) -> tuple[Single, Array]:
+def _matrix(layout: Layout) -> tuple[Single, Array]:
     basis = step_basis()
-    origin = basis.origin + first
+    near, coarse, share = layout.near, layout.coarse, layout.share
+    origin = basis.origin + layout.first
     edges, nodes = len(share), basis.matrix.shape[1]
-    fine = basis.matrix[near + origin] * share.sum(axis=0)[:, None].astype(np.float32)
+    fine = basis.matrix[near[0] + origin : near[-1] + origin + 1] * share.sum(axis=0)[:, None].astype(np.float32)
     far = np.repeat(basis.coarse[coarse + origin][None], edges, axis=0)
     fine_constant, far_constant = np.zeros(len(near)), np.zeros((edges, len(coarse)))
     last = len(basis.times) - 2
-    for part in neighbours:
-        whole = int(np.floor(part.lag))
-        later = part.lag - whole
+    for part in layout.neighbours:
         plateau = 0.5 * np.sign(part.lag) * part.factor
         fine_constant -= plateau * share[part.edge]
         far_constant[part.edge] -= plateau
-        for step, amount in ((whole, 1.0 - later), (whole + 1, later)):
-            scale = np.float32(amount * part.factor)
-            at = np.clip(near + (origin + step), 0, last)
-            fine += basis.matrix[at] * (scale * share[part.edge].astype(np.float32))[:, None]
-            far[part.edge] += basis.coarse[np.clip(coarse + (origin + step), 0, last)] * scale
+        for whole, amount in _split(part.lag):
+            far[part.edge] += basis.coarse[np.clip(coarse + (origin + whole), 0, last)] * np.float32(
+                amount * part.factor
+            )
+    for lag, factor in _near_parts(layout):
+        for whole, amount in _split(lag):
+            at = np.clip(near + (origin + whole), 0, last)
+            fine += basis.matrix[at] * (amount * factor).astype(np.float32)[:, None]
     constant = np.concatenate([fine_constant, far_constant.ravel()])
     return np.vstack([fine, far.reshape(-1, nodes)]), constant
 
 
-def _nuisance(pile: Pile, near: Any, coarse: Any, share: Array, signs: Array, code: float) -> tuple[Array, Array]:
-    """Offset of each profile, and plateaus within one code, which are off by part of it."""
-    edges = len(share)
-    times = pile.times
-    flat = pile.flat.astype(np.float64)
+def _split(lag: float) -> tuple[tuple[int, float], tuple[int, float]]:
+    """Two bins, and how much of each, for a place between them."""
+    whole = int(np.floor(lag))
+    return (whole, 1.0 - (lag - whole)), (whole + 1, lag - whole)
+
+
+def _near_parts(layout: Layout) -> list[tuple[float, Array]]:
+    """Lag, and share in every fine row, of what neighbours leave there; neighbours at about one lag together."""
+    groups: dict[int, list[Neighbour]] = {}
+    for part in layout.neighbours:
+        groups.setdefault(round(part.lag / 2.0), []).append(part)
+    return [
+        (
+            float(np.mean([part.lag for part in group])),
+            np.sum([part.factor * layout.share[part.edge] for part in group], axis=0),
+        )
+        for group in groups.values()
+    ]
+
+
+def _nuisance(layout: Layout, pile: Pile, code: float) -> tuple[Array, Array]:
+    """Plateaus within one code, which are off by part of it; offset of each profile; error of the middle."""
+    near, coarse, share = layout.near, layout.coarse, layout.share
+    edges, flat = len(share), pile.flat.astype(np.float64)
     columns = []
-    for side in (times < 0, times > 0):
+    for side in (pile.times < 0, pile.times > 0):
         held = flat * side
         columns.append(np.concatenate([(held[:, near] * share).sum(axis=0), held[:, coarse].ravel()]))
+    own = np.zeros((edges, len(near) + edges * len(coarse)))
+    own[:, : len(near)] = share
     for edge in range(edges):
-        far = np.zeros((edges, len(coarse)))
-        far[edge] = 1.0
-        columns.append(np.concatenate([share[edge], far.ravel()]))
-    far = np.repeat(signs[:, None], len(coarse), axis=1)
-    columns.append(np.concatenate([signs @ share, far.ravel()]))
+        first = len(near) + edge * len(coarse)
+        own[edge, first : first + len(coarse)] = 1.0
+    columns += [*own, layout.signs @ own]
     allowed = [code / np.sqrt(12.0) + 1e-9] * 2 + [OFFSET] * edges + [MIDDLE]
     return np.stack(columns), np.array(allowed)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 from collections.abc import Callable
 from dataclasses import dataclass
 
@@ -11,9 +12,10 @@ import numpy.typing as npt
 from patternscore.errors import Unreadable
 from patternscore.frame import Frame
 from patternscore.located import Located
+from patternscore.measure.corner import fit_corners
 from patternscore.measure.esf import EdgeSpread, TransferCurve, edge_spread, transfer_curve
-from patternscore.measure.fitedge import FittedEdge, fit_across, fit_along, fit_corner
-from patternscore.plan import Edge
+from patternscore.measure.fitedge import FittedEdge, fit_edges
+from patternscore.measure.profile import Run, lay_runs
 from patternscore.reading import Estimate, Findings
 
 Array = npt.NDArray[np.float64]
@@ -83,7 +85,8 @@ def read_edges(frame: Frame, located: Located) -> Findings:
         ``EdgeTrace``.
     """
     findings = Findings()
-    along, across = _fit(frame, located, "h"), _fit(frame, located, "v")
+    runs = lay_runs(located, list(located.plan.edges)) if located.plan.edges else {}
+    along, across = _fit(frame, runs, "h"), _fit(frame, runs, "v")
     if isinstance(along, str):
         findings.miss(along, *ALONG, "corner_loss", "jitter")
     if isinstance(across, str):
@@ -92,27 +95,27 @@ def read_edges(frame: Frame, located: Located) -> Findings:
     if isinstance(along, FittedEdge):
         known = _seen_through(along, across) if isinstance(across, FittedEdge) else None
         _read_along(findings, frame, along, known, upright)
-        _read_corners(findings, frame, located, along, known)
+        _read_corners(findings, frame, runs, along, known)
     return findings
 
 
-def _fit(frame: Frame, located: Located, axis: str) -> FittedEdge | str:
+def _fit(frame: Frame, runs: dict[str, Run], axis: str) -> FittedEdge | str:
     """Fit the centre's edges of one axis; the reason where they cannot be read."""
-    blocks = _blocks(located, "centre", axis)
+    blocks = _blocks(runs, "centre", axis)
     if not blocks:
         return "the pattern has no edge for it"
     try:
-        return (fit_along if axis == "h" else fit_across)(frame, located, blocks)
+        return fit_edges(frame, blocks, across=axis == "v")
     except Unreadable as reason:
         return reason.reason
 
 
-def _blocks(located: Located, place: str, axis: str) -> list[list[Edge]]:
+def _blocks(runs: dict[str, Run], place: str, axis: str) -> list[list[Run]]:
     """Edges of a place, those of one block together."""
-    found: dict[str, list[Edge]] = {}
-    for edge in located.plan.edges:
-        if edge.place == place and edge.axis == axis:
-            found.setdefault(edge.block, []).append(edge)
+    found: dict[str, list[Run]] = {}
+    for run in runs.values():
+        if run.edge.place == place and run.edge.axis == axis:
+            found.setdefault(run.edge.block, []).append(run)
     return list(found.values())
 
 
@@ -184,24 +187,20 @@ def _read_across(findings: Findings, frame: Frame, fitted: FittedEdge, along: Fi
     return curve
 
 
-def _read_corners(findings: Findings, frame: Frame, located: Located, centre: FittedEdge, known: Array | None) -> None:
+def _read_corners(
+    findings: Findings, frame: Frame, runs: dict[str, Run], centre: FittedEdge, known: Array | None
+) -> None:
     reading = next((entry for entry in findings.readings if entry.key == "mtf50_h"), None)
     if reading is None:
         findings.miss("there is no response at the centre to compare the corners with", "corner_loss")
         return
-    found: list[Estimate] = []
-    places = []
-    for place in CORNERS:
-        blocks = _blocks(located, place, "h")
-        if not blocks:
-            continue
-        try:
-            corner = fit_corner(frame, located, blocks, centre)
-            curve = transfer_curve(corner.response, frame.sample_rate, known)
+    blocks = {place: held[0] for place in CORNERS if (held := _blocks(runs, place, "h"))}
+    found, places = [], []
+    for place, response in fit_corners(frame, blocks, centre).items():
+        with contextlib.suppress(Unreadable):
+            curve = transfer_curve(response, frame.sample_rate, known)
             found.append(curve.falls_to(0.5, frame.sample_rate / 2))
             places.append(place)
-        except Unreadable:
-            continue
     if not found:
         findings.miss("no corner shows an edge that can be read", "corner_loss")
         return

@@ -8,8 +8,8 @@ import numpy as np
 import numpy.typing as npt
 
 from patternscore.errors import Unreadable
-from patternscore.measure.response import Response, edge_of
-from patternscore.measure.stepbasis import BINS, step_basis
+from patternscore.measure.response import Response
+from patternscore.measure.stepbasis import BINS, edge_of, step_basis
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[np.float64]

@@ -9,20 +9,17 @@ import numpy.typing as npt
 
 from patternscore.errors import Unreadable
 from patternscore.frame import Frame
-from patternscore.located import Located
 from patternscore.measure.align import Alignment, refine, settle
-from patternscore.measure.design import Design, design
-from patternscore.measure.family import Family, Start, around, nearest, relative
-from patternscore.measure.profile import Coding, Pile, Strip, coding_of, cut_strip, pile_up
-from patternscore.measure.response import Response, edge_of, fit
-from patternscore.measure.stepbasis import BINS
-from patternscore.plan import Edge
+from patternscore.measure.design import design, lay_out
+from patternscore.measure.family import Family, Start, around, nearest
+from patternscore.measure.profile import Pile, Run, Strip, coding_of, cut_strip, pile_up
+from patternscore.measure.response import Response, fit
+from patternscore.measure.stepbasis import BINS, edge_of
 
 Array = npt.NDArray[np.float64]
 ROUNDING_LEFT = 0.05  # share of the variance of rounding that stays when it has been taken out by a model
 MISFIT = 2.5  # chi2 per degree of freedom above which another round is worth its time
-ROUNDS = 3
-CORNER_LEVELS = (1e-3, 1e-2, 1e-1)
+ROUNDS, ROUNDS_ACROSS = 3, 2
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -60,62 +57,59 @@ class FittedEdge:
         return self.strips[0].right
 
 
-def fit_along(frame: Frame, located: Located, blocks: list[list[Edge]]) -> FittedEdge:
-    """Fit near-vertical edges.
+def fit_edges(frame: Frame, blocks: list[list[Run]], *, across: bool) -> FittedEdge:
+    """Fit the edges of one place and axis.
+
+    Parameters
+    ----------
+    blocks : list of list of Run
+        The edges of each block.
+    across : bool
+        Whether they show the response across the lines.
 
     Raises
     ------
     Unreadable
         If they are not there, cut off or too faint.
+
+    Notes
+    -----
+    Edges are first brought into step by their areas, then by the nearest of a library of profiles. Where the
+    code is coarse against the noise, or the fit leaves too much, it is done again with what has been learnt.
     """
-    return _fit(frame, located, blocks, across=False)
-
-
-def fit_across(frame: Frame, located: Located, blocks: list[list[Edge]]) -> FittedEdge:
-    """Fit near-horizontal edges.
-
-    Raises
-    ------
-    Unreadable
-        If they are not there, cut off or too faint.
-    """
-    return _fit(frame, located, blocks, across=True)
-
-
-def fit_corner(frame: Frame, located: Located, blocks: list[list[Edge]], centre: FittedEdge) -> FittedEdge:
-    """Fit near-vertical edges as a change from those at the centre.
-
-    Raises
-    ------
-    Unreadable
-        If they are not there, cut off or too faint.
-    """
-    strips = _strips(frame, located, blocks)
+    strips = _strips(frame, blocks, across=across)
     coding = coding_of(frame)
-    family = relative(centre.response.gain)
-    first = -strips[0].left * BINS
+    scale = float(np.mean(np.concatenate([strip.step for strip in strips])))
     pile = pile_up(strips, coding)
-    alignment = None
-    for _ in range(2):
-        model = _design(strips, pile, coding, 1.0).profiles(edge_of(family.shape(family.start)[0]))
-        alignment = _refine(strips, first, model, jitter=True)
-        pile = pile_up(strips, coding)
-    assert alignment is not None
-    coding = coding.with_noise(pile.noise * float(strips[0].step.mean()))
-    taps = np.array([-3, -2, -1, 1, 2, 3]) * BINS
-    response = fit(
-        _design(strips, pile, coding, coding.left_by_noise), family, taps, levels=CORNER_LEVELS, decays=(2.0,),
-        wide=False, steps=6,
-    )  # fmt: skip
+    family = _family(_begin(strips, pile, across=across), across=across)
+    layout = lay_out(strips, pile, neighbours=not across)
+    model = layout.profiles(edge_of(family.shape(family.start)[0], layout.reach(0)))
+    alignment = _refine(strips, model, jitter=not across)
+    pile = pile_up(strips, coding, model)
+    coding = coding.with_noise(pile.noise * scale)
+    layout = lay_out(strips, pile, neighbours=not across)
+    posed = design(layout, pile, coding.step / scale, coding.left_by_noise)
+    taps = _taps(strips[0], across=across)
+    rounds = ROUNDS_ACROSS if across else ROUNDS
+    response = fit(posed, family, taps, own=not across)
+    for _ in range(rounds - 1):
+        if not coding.coarse and response.chi2 < MISFIT:
+            break
+        alignment = _refine(strips, response.model, jitter=not across)
+        pile = pile_up(strips, coding, response.model, rounding=True)
+        layout = lay_out(strips, pile, neighbours=not across)
+        posed = design(layout, pile, coding.step / scale, ROUNDING_LEFT * coding.left_by_noise, posed)
+        response = fit(posed, _again(family, response), taps, own=not across)
     return FittedEdge(tuple(strips), pile, alignment, response, _slant(strips))
 
 
-def _strips(frame: Frame, located: Located, blocks: list[list[Edge]]) -> list[Strip]:
+def _strips(frame: Frame, blocks: list[list[Run]], *, across: bool) -> list[Strip]:
     """Strips of the blocks that can be read, all with the same window."""
     strips, reason = [], "the pattern has no edge for it"
-    for edges in blocks:
+    transposed = np.ascontiguousarray(frame.luma.T) if across else None
+    for runs in blocks:
         try:
-            strip = cut_strip(frame, located, edges)
+            strip = cut_strip(frame, runs, transposed)
             settle(strip)
             strips.append(strip)
         except Unreadable as failed:
@@ -124,21 +118,16 @@ def _strips(frame: Frame, located: Located, blocks: list[list[Edge]]) -> list[St
         raise Unreadable(reason)
     left, right = min(strip.left for strip in strips), min(strip.right for strip in strips)
     for strip in strips:
-        strip.left, strip.right = left, right
+        strip.narrow(left, right)
     return strips
 
 
-def _design(strips: list[Strip], pile: Pile, coding: Coding, residue: float) -> Design:
-    code = coding.step / float(np.mean(np.concatenate([strip.step for strip in strips])))
-    return design(strips, pile, code, residue)
-
-
-def _refine(strips: list[Strip], first: int, model: Array, *, jitter: bool) -> Alignment:
+def _refine(strips: list[Strip], model: Array, *, jitter: bool) -> Alignment:
     """Bring every strip into step with its part of the modelled profiles."""
     found, done = [], 0
     for strip in strips:
         count = len(strip.position)
-        found.append(refine(strip, first, model[done : done + count], jitter=jitter))
+        found.append(refine(strip, model[done : done + count], jitter=jitter))
         done += count
     return found[0]
 
@@ -147,30 +136,6 @@ def _begin(strips: list[Strip], pile: Pile, *, across: bool) -> Start:
     """Member of the library nearest to the mean profile."""
     profile, sound = pile.whole()
     return nearest(profile, strips[0].left, strips[0].right, used=sound, across=across)
-
-
-def _fit(frame: Frame, located: Located, blocks: list[list[Edge]], *, across: bool) -> FittedEdge:
-    strips = _strips(frame, located, blocks)
-    coding = coding_of(frame)
-    first = -strips[0].left * BINS
-    pile = pile_up(strips, coding)
-    for _ in range(2):
-        family = _family(_begin(strips, pile, across=across), across=across)
-        model = _design(strips, pile, coding, 1.0).profiles(edge_of(family.shape(family.start)[0]))
-        alignment = _refine(strips, first, model, jitter=not across)
-        pile = pile_up(strips, coding)
-    taps = _taps(strips[0], across=across)
-    family = _family(_begin(strips, pile, across=across), across=across)
-    response = fit(_design(strips, pile, coding, coding.left_by_noise), family, taps)
-    for _ in range(ROUNDS - 1):
-        coding = coding.with_noise(pile.noise * float(strips[0].step.mean()))
-        alignment = _refine(strips, first, response.model, jitter=not across)
-        pile = pile_up(strips, coding, response.model)
-        posed = _design(strips, pile, coding, ROUNDING_LEFT * coding.left_by_noise)
-        response = fit(posed, _again(family, response), taps)
-        if not coding.coarse and response.chi2 < MISFIT:
-            break
-    return FittedEdge(tuple(strips), pile, alignment, response, _slant(strips))
 
 
 def _family(start: Start, *, across: bool) -> Family:
@@ -193,5 +158,5 @@ def _taps(strip: Strip, *, across: bool) -> npt.NDArray[np.int64]:
 
 def _slant(strips: list[Strip]) -> float:
     """Mean rate at which the edges move from row to row."""
-    rates = [abs(np.polyfit(strip.rows, strip.position.mean(axis=0), 1)[0]) for strip in strips]
+    rates = [abs(np.mean(strip.position[:, -1] - strip.position[:, 0])) / np.ptp(strip.rows) for strip in strips]
     return float(np.mean(rates))

@@ -47,6 +47,10 @@ class Strip:
         Shift of each row against the straight run of its edges, samples.
     field_shift : float
         Across only: how much later an edge lies in the lines 1, 3, 5 ... than in the others, lines.
+    start : (edges, n) int
+        First sample of each window cut.
+    levels : (edges, n, window) float32
+        The windows, IRE.
     """
 
     luma: Single
@@ -59,39 +63,79 @@ class Strip:
     step: Array = field(default_factory=lambda: np.ones(1))
     shifts: Array = field(default_factory=lambda: np.zeros(1))
     field_shift: float = 0.0
+    start: npt.NDArray[np.int64] = field(default_factory=lambda: np.zeros((1, 1), dtype=np.int64))
+    levels: Single = field(default_factory=lambda: np.zeros((1, 1, 1), dtype=np.float32))
 
-    def windows(self) -> tuple[Single, Single]:
-        """Times from the edge (samples) and levels (IRE): two arrays of (edges, rows, window)."""
-        return self.cut(self.left, self.right)
-
-    def cut(self, left: int, right: int) -> tuple[Single, Single]:
-        """Give the windows with these whole samples before and after each edge."""
-        whole = np.floor(self.position).astype(np.int64)
-        reach = np.arange(-left, right + 2)
-        columns = whole[..., None] + reach
+    def cut(self) -> None:
+        """Cut the windows about the present positions; small moves later on need no new cut."""
+        self.start = np.floor(self.position).astype(np.int64) - self.left
+        columns = self.start[..., None] + np.arange(self.left + self.right + 2)
         np.clip(columns, 0, self.luma.shape[1] - 1, out=columns)
-        times = reach.astype(np.float32) - (self.position - whole).astype(np.float32)[..., None]
+        columns += (self.rows * self.luma.shape[1])[:, None]
+        self.levels = self.luma.ravel()[columns]
+        self.shifts = np.zeros(len(self.rows))
+
+    def narrow(self, left: int, right: int) -> None:
+        """Narrow the windows to these whole samples before and after the edges."""
+        first = self.left - left
+        self.levels = self.levels[..., first : first + left + right + 2]
+        self.start = self.start + first
+        self.left, self.right = left, right
+
+    def keep(self, rows: npt.NDArray[np.bool_]) -> None:
+        """Drop the other rows."""
+        self.rows, self.position = self.rows[rows], self.position[:, rows]
+        self.start, self.levels = self.start[:, rows], self.levels[:, rows]
+        self.shifts = self.shifts[rows]
+
+    def times(self) -> Single:
+        """Times of the windows' samples from the edge, samples: (edges, rows, window)."""
+        reach = np.arange(self.levels.shape[2], dtype=np.float32)
+        times = reach + (self.start - self.position).astype(np.float32)[..., None]
         if self.field_shift:
-            times -= np.float32(self.field_shift) * (columns % 2 - np.float32(0.5))
-        columns += (self.rows * self.luma.shape[1])[None, :, None]
-        levels = self.luma.ravel()[columns]
-        return times, levels
+            odd = (self.start[..., None] + np.arange(self.levels.shape[2])) % 2
+            times -= np.float32(self.field_shift) * (odd - np.float32(0.5)).astype(np.float32)
+        return times
+
+    def bins(self) -> tuple[npt.NDArray[np.int32], Single]:
+        """Bin of each sample in a table of (edges, bins + 2), its ends for what lies outside, and distance from it."""
+        place = self.times()
+        place *= np.float32(BINS)
+        nearest = np.rint(place)
+        place -= nearest
+        place *= np.float32(1.0 / BINS)
+        index = nearest.astype(np.int32)
+        index += np.int32(self.left * BINS + 1)
+        size = (self.left + self.right) * BINS + 3
+        np.clip(index, 0, size - 1, out=index)
+        index += (np.arange(len(index), dtype=np.int32) * np.int32(size))[:, None, None]
+        return index, place
 
     def signed(self, levels: Single) -> Single:
         """Levels as fractions of the step about its middle, every edge rising: -1/2 to 1/2."""
         scale = (self.sign / self.step).astype(np.float32)[:, None, None]
         return (levels - self.middle.astype(np.float32)[:, None, None]) * scale
 
-    def expected(self, model: Array, first: int, times: Single) -> Single:
-        """Levels in IRE of a modelled profile a edge at some times; bins as in ``Pile``."""
-        place = times * np.float32(BINS) - np.float32(first)
-        index = np.clip(place.astype(np.int64), 0, model.shape[1] - 2)
-        place -= index.astype(np.float32)
-        index += (np.arange(len(model)) * model.shape[1])[:, None, None]
-        rise = np.diff(model, axis=1, append=model[:, -1:]).astype(np.float32).ravel()
-        value = model.astype(np.float32).ravel()[index] + rise[index] * place
+    def unsigned(self, values: Single) -> Single:
+        """Levels in IRE of fractions of the step."""
         scale = (self.sign * self.step).astype(np.float32)[:, None, None]
-        return np.asarray(value * scale + self.middle.astype(np.float32)[:, None, None])
+        return values * scale + self.middle.astype(np.float32)[:, None, None]
+
+
+def table(model: Array) -> Single:
+    """Flat table of (edges, bins + 2) for ``Strip.bins``."""
+    held = np.empty((len(model), model.shape[1] + 2), dtype=np.float32)
+    held[:, 1:-1] = model
+    held[:, 0], held[:, -1] = model[:, 0], model[:, -1]
+    return held.ravel()
+
+
+def slope_of(model: Array) -> Array:
+    """Slope of profiles on bins, per sample; nought at their ends."""
+    slope = np.zeros_like(model)
+    np.subtract(model[..., 2:], model[..., :-2], out=slope[..., 1:-1])
+    slope *= BINS / 2.0
+    return slope
 
 
 @dataclass(frozen=True, slots=True)
@@ -183,7 +227,7 @@ class Pile:
         return np.asarray((self.mean * share).sum(axis=0)), np.asarray(sound.any(axis=0))
 
 
-def pile_up(strips: list[Strip], coding: Coding, model: Array | None = None) -> Pile:
+def pile_up(strips: list[Strip], coding: Coding, model: Array | None = None, *, rounding: bool = False) -> Pile:
     """Pile the windows of all edges of some strips into bins, each edge by itself.
 
     Parameters
@@ -191,105 +235,142 @@ def pile_up(strips: list[Strip], coding: Coding, model: Array | None = None) -> 
     coding : Coding
         How levels were coded.
     model : (edges, bins) array, optional
-        What the profiles are already known to be like: takes out what rounding to codes does to the means, and
-        the bend of the profile within a bin.
+        What the profiles are already known to be like: takes out the bend of the profile within a bin.
+    rounding : bool
+        Whether the model is good to a part of a code, so that it also takes out what rounding does to the means.
     """
     left, right = strips[0].left, strips[0].right
-    first, bins = -left * BINS, (left + right) * BINS + 1
     edges = sum(len(strip.position) for strip in strips)
-    sums = np.zeros((6, edges, bins + 2))
+    sums = np.zeros((6, edges, (left + right) * BINS + 3))
     done = 0
     for strip in strips:
-        count = len(strip.position)
-        own = slice(done, done + count)
-        times, levels = strip.cut(left, right)
-        clipped = (levels <= coding.limits[0]) | (levels >= coding.limits[1])
-        if model is not None and coding.coarse:
-            levels = levels - coding.rounding(strip.expected(model[own], first, times))
-        values = strip.signed(levels)
-        place = times * np.float32(BINS)
-        nearest = np.rint(place)
-        off = ((place - nearest) * np.float32(1.0 / BINS)).ravel()
-        index = nearest.astype(np.int64) - (first - 1)
-        np.clip(index, 0, bins + 1, out=index)
-        index += (np.arange(count) * (bins + 2))[:, None, None]
-        value, flat, size = values.ravel(), index.ravel(), count * (bins + 2)
-        terms: list[Any] = [None, value, off, off * off, value * value]
-        if clipped.any():
-            terms.append(clipped.ravel())
-        for row, term in enumerate(terms):
-            sums[row, own] = np.bincount(flat, term, size).reshape(count, -1)
-        done += count
+        own = slice(done, done + len(strip.position))
+        _pile_strip(sums[:, own], strip, coding, None if model is None else model[own], rounding)
+        done = own.stop
     scale = float(np.mean(np.concatenate([strip.step for strip in strips])))
-    return _pile(first, sums[..., 1:-1], model, coding.step / scale)
+    return _pile(-left * BINS, sums[..., 1:-1], model, coding.step / scale)
+
+
+def _pile_strip(sums: Array, strip: Strip, coding: Coding, model: Array | None, rounding: bool) -> None:
+    levels = strip.levels
+    index, off = strip.bins()
+    low, high = levels.min(), levels.max()
+    ends = None
+    if low <= coding.limits[0] or high >= coding.limits[1]:
+        ends = (levels <= coding.limits[0]) | (levels >= coding.limits[1])
+    if model is not None and rounding and coding.coarse:
+        rate = slope_of(model)
+        expected = strip.unsigned(table(model)[index] + table(rate)[index] * off)
+        levels = levels - coding.rounding(expected)
+    value = strip.signed(levels)
+    terms: list[Any] = [None, value, None, None, value * value, ends]
+    if model is not None:
+        terms[2], terms[3] = off, off * off
+    flat, shape = index.ravel(), sums.shape[1:]
+    for row, term in enumerate(terms):
+        if row == 0 or term is not None:
+            weights = None if term is None else term.ravel()
+            sums[row] = np.bincount(flat, weights, shape[0] * shape[1]).reshape(shape)
 
 
 def _pile(first: int, sums: Array, model: Array | None, code: float) -> Pile:
     count, value, off, square, power, clipped = sums
-    whole = np.maximum(count, 1.0)
-    mean = value / whole
-    variance = np.maximum(power / whole - mean**2, 0.0)
-    slope = np.gradient(mean, 1.0 / BINS, axis=1)
-    # What the edge's own slope does within a bin is no noise.
-    spread = variance - slope**2 * (square / whole - (off / whole) ** 2)
-    free = np.maximum(count - 1, 0)
-    noise = np.sqrt(max(float((spread * count).sum() / max(free.sum(), 1.0)), 1e-10))
+    share = 1.0 / np.maximum(count, 1.0)
+    mean = value * share
+    variance = power * share - mean**2
+    # What the edge's own slope does within a bin, over which samples lie evenly, is no noise.
+    spread = variance - (slope_of(mean) / BINS) ** 2 / 12.0
+    free = float(count.sum() - np.count_nonzero(count))
+    noise = np.sqrt(max(float(np.vdot(spread, count)) / max(free, 1.0), 1e-10))
     if model is not None:
         # A bin holds the mean of a bent curve about its centre, not its value there.
-        rate = np.gradient(model, 1.0 / BINS, axis=1)
-        mean -= off / whole * rate + square / whole / 2 * np.gradient(rate, 1.0 / BINS, axis=1)
-    return Pile(first, count, mean, np.sqrt(variance) < 0.25 * code, clipped > 0, float(noise))
+        rate = slope_of(model)
+        mean -= share * (off * rate + square * slope_of(rate) / 2.0)
+    return Pile(first, count, mean, variance < (0.25 * code) ** 2, clipped > 0, float(noise))
 
 
-def cut_strip(frame: Frame, located: Located, edges: list[Edge]) -> Strip:
-    """Lay out the windows of one block's edges from where the plan puts them.
+@dataclass(frozen=True, slots=True, eq=False)
+class Run:
+    """Where an edge of the plan ought to lie in the frame.
+
+    Attributes
+    ----------
+    low, high : float
+        Rows between which it runs.
+    curve : (4,) float64
+        Its position, a cubic in the row, -1 to 1 from ``low`` to ``high``; lowest power first.
+    before, after : float
+        Samples that are clear on its sides.
+    """
+
+    edge: Edge
+    low: float
+    high: float
+    curve: Array
+    before: float
+    after: float
+
+    def position(self, rows: npt.NDArray[Any]) -> Array:
+        """Position in some rows."""
+        u = (2.0 * rows - self.low - self.high) / (self.high - self.low)
+        c = self.curve
+        return np.asarray(c[0] + u * (c[1] + u * (c[2] + u * c[3])))
+
+
+def lay_runs(located: Located, edges: list[Edge]) -> dict[str, Run]:
+    """Lay edges of the plan on the frame, by name."""
+    parts = np.array([0.0, 0.3, 0.7, 1.0])
+    points = []
+    for edge in edges:
+        start, end = np.array(edge.start), np.array(edge.end)
+        aside = np.array([1.0, 0.0] if edge.axis == "h" else [0.0, 1.0])
+        middle = (start + end) / 2
+        points += [start + part * (end - start) for part in parts]
+        points += [middle, middle - edge.clear_before * aside, middle + edge.clear_after * aside]
+    found = located.warp.to_frame(np.array(points)).reshape(len(edges), -1, 2)
+    return {edge.name: _run(edge, place) for edge, place in zip(edges, found, strict=True)}
+
+
+def _run(edge: Edge, place: Array) -> Run:
+    rows, along = (place[:, 1], place[:, 0]) if edge.axis == "h" else (place[:, 0], place[:, 1])
+    low, high = float(rows[:4].min()), float(rows[:4].max())
+    u = (2.0 * rows[:4] - low - high) / max(high - low, 1e-6)
+    curve = np.linalg.solve(u[:, None] ** np.arange(4), along[:4])
+    return Run(edge, low, high, curve, float(along[4] - along[5]), float(along[6] - along[4]))
+
+
+def cut_strip(frame: Frame, runs: list[Run], transposed: Single | None = None) -> Strip:
+    """Lay out the windows of one block's edges.
+
+    Parameters
+    ----------
+    runs : list of Run
+        The edges of the block.
+    transposed : (samples, rows) float32, optional
+        The frame's levels transposed, if at hand; for edges across the lines.
 
     Raises
     ------
     Unreadable
         If the block is cut off by the frame or too short.
     """
-    across = edges[0].axis == "v"
-    luma = np.ascontiguousarray(frame.luma.T) if across else frame.luma
-    runs = [_run(located, edge) for edge in edges]
-    low = max(run[0].min() for run in runs) + END[edges[0].axis]
-    high = min(run[0].max() for run in runs) - END[edges[0].axis]
-    rows = np.arange(int(np.ceil(max(low, 0.0))), int(np.floor(min(high, luma.shape[0] - 1.0))) + 1)
+    axis = runs[0].edge.axis
+    luma = frame.luma
+    if axis == "v":
+        luma = np.ascontiguousarray(frame.luma.T) if transposed is None else transposed
+    low = max(max(run.low for run in runs) + END[axis], 0.0)
+    high = min(min(run.high for run in runs) - END[axis], luma.shape[0] - 1.0)
+    rows = np.arange(int(np.ceil(low)), int(np.floor(high)) + 1)
     if len(rows) < FEWEST:
         raise Unreadable("the edge does not cross enough of the frame")
-    position = np.stack([_along(run, rows) for run in runs])
-    position = position[np.argsort(position.mean(axis=1))]
-    before, after = _clear(located, edges, position)
-    inside = np.all((position - before > 0) & (position + after < luma.shape[1] - 1), axis=0)
-    if np.count_nonzero(inside) < FEWEST:
-        raise Unreadable("the edge lies too near the side of the frame")
-    longest = LONGEST[edges[0].axis]
-    left, right = int(min(before, longest)), int(min(after, longest))
-    return Strip(luma, rows[inside], position[:, inside], left, right)
-
-
-def _run(located: Located, edge: Edge) -> tuple[Array, Array]:
-    """Points along an edge: its row coordinate and its position coordinate."""
-    part = np.linspace(0.0, 1.0, 7)[:, None]
-    points = located.warp.to_frame(np.array(edge.start) * (1 - part) + np.array(edge.end) * part)
-    return (points[:, 1], points[:, 0]) if edge.axis == "h" else (points[:, 0], points[:, 1])
-
-
-def _along(run: tuple[Array, Array], rows: npt.NDArray[Any]) -> Array:
-    middle, half = run[0].mean(), np.ptp(run[0]) / 2
-    curve = np.polynomial.polynomial.polyfit((run[0] - middle) / half, run[1], 3)
-    return np.asarray(np.polynomial.polynomial.polyval((rows - middle) / half, curve))
-
-
-def _clear(located: Located, edges: list[Edge], position: Array) -> tuple[float, float]:
-    """Samples before and after every edge that belong to it: half the way to a neighbour, or the clear part."""
-    axis = 0 if edges[0].axis == "h" else 1
-    ordered = sorted(edges, key=lambda edge: edge.start[axis])
-    middles = np.array([(np.array(edge.start) + np.array(edge.end)) / 2 for edge in edges])
-    scale = float(np.mean(np.abs(located.warp.slopes(middles)[:, axis, axis])))
-    half_gaps = np.diff(position.mean(axis=1)) / 2
-    before = min([ordered[0].clear_before * scale - MARGIN, *half_gaps])
-    after = min([ordered[-1].clear_after * scale - MARGIN, *half_gaps])
+    runs = sorted(runs, key=lambda run: run.curve[0])
+    position = np.stack([run.position(rows) for run in runs])
+    gaps = np.diff([run.curve[0] for run in runs]) / 2
+    before, after = min([runs[0].before - MARGIN, *gaps]), min([runs[-1].after - MARGIN, *gaps])
     if min(before, after) < SHORTEST:
         raise Unreadable("too little of the pattern is clear beside the edge")
-    return float(before), float(after)
+    inside = (position[0] - before > 0) & (position[-1] + after < luma.shape[1] - 1)
+    if np.count_nonzero(inside) < FEWEST:
+        raise Unreadable("the edge lies too near the side of the frame")
+    longest = LONGEST[axis]
+    return Strip(luma, rows[inside], position[:, inside], int(min(before, longest)), int(min(after, longest)))

@@ -9,7 +9,7 @@ import numpy.typing as npt
 
 from patternscore.measure.design import Design
 from patternscore.measure.family import Family
-from patternscore.measure.stepbasis import BINS, step_basis
+from patternscore.measure.stepbasis import BINS, edge_of, step_basis
 
 Array = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
@@ -55,12 +55,6 @@ class Response:
     hyper: tuple[float, ...] = ()
 
 
-def edge_of(gain: Complex) -> Array:
-    """Response to a step at every bin of the basis, less one half."""
-    packed = np.concatenate([gain.real, gain.imag]).astype(np.float32)
-    return np.asarray(step_basis().matrix @ packed, dtype=np.float64)
-
-
 def fit(
     design: Design,
     family: Family,
@@ -68,7 +62,7 @@ def fit(
     *,
     levels: tuple[float, ...] = TAP_LEVELS,
     decays: tuple[float, ...] = TAP_DECAYS,
-    wide: bool = True,
+    own: bool = True,
     steps: int = 12,
 ) -> Response:
     """Fit a family, then what the family leaves.
@@ -79,18 +73,18 @@ def fit(
         Echoes that may correct the family, bins later than the edge.
     levels, decays : tuple of float
         Prior sigmas of the echoes to choose from, and samples over which they die away.
-    wide : bool
-        Whether echoes of a sharp edge are tried beside those of the family's own.
+    own : bool
+        Whether echoes of the family's own edge are tried beside those of a sharp one.
     steps : int
         Most steps that the family is given.
     """
-    columns, allowed = design.beyond(edge_of(family.shape(family.start)[0]))
-    still = np.zeros(1, dtype=np.int64)
-    outer = np.stack([design.rows_of(column, still, 0)[0] for column in columns])
-    side = np.vstack([design.nuisance, outer])
+    layout = design.layout
+    columns, allowed = layout.beyond(edge_of(family.shape(family.start)[0], layout.reach(0)))
+    side = np.vstack([design.nuisance, layout.rows_of(columns)])
     prior = np.concatenate([family.prior, [STEP_PRIOR], design.allowed, allowed])
     theta, step = _family(design, family, side, prior, steps)
-    bases = (None, _wide(step_basis().nu)) if wide else (None,)
+    wide = _wide(step_basis().nu)
+    bases: tuple[Complex | None, ...] = (None, wide) if own else (wide,)
     found = _with_echoes(design, family, theta, step, side, prior, taps, bases, levels, decays)
     return _finished(design, found, columns)
 
@@ -188,23 +182,22 @@ def _with_echoes(
     pull[:families] = theta - family.start
     pull[count] = step - 1.0
     allowed = np.concatenate([prior[:families], np.zeros(len(taps)), prior[families:]])
+    layout, pad = design.layout, int(np.abs(taps).max())
     best = None
     for base in bases:
-        pad = int(np.abs(taps).max())
-        spread = edge_of(gain if base is None else base)
-        moved = design.rows_of(design.profiles(spread, pad), np.append(taps, 0), pad)
+        spread = edge_of(gain if base is None else base, layout.reach(pad))
+        moved = layout.rows_moved(layout.profiles(spread, pad), np.append(taps, 0), pad)
         echoes = (moved[:-1] - moved[-1]) * design.weight
         columns = np.vstack([fixed[:families], echoes, fixed[families:]])
         normal, right = columns @ columns.T, columns @ rest
-        for decay in decays:
-            envelope = np.exp(-np.abs(taps / BINS) / decay)
-            for level in levels:
-                allowed[families:count] = level * envelope + 1e-9
-                found = _evidence(normal, right, allowed, pull)
-                if best is None or found[0] > best[0][0]:
-                    best = found, allowed.copy(), base, columns, (level, decay, float(base is not None))
+        tried = _most_probable(normal, right, allowed, pull, slice(families, count), taps, levels, decays)
+        if best is None or tried[0] > best[0][0]:
+            best = tried, base, columns, normal, right
     assert best is not None
-    (_, solved, factor), allowed, base, columns, hyper = best
+    (_, level, decay), base, columns, normal, right = best
+    allowed[families:count] = level * np.exp(-np.abs(taps / BINS) / decay)
+    solved, factor = _solve(normal, right, allowed, pull)
+    hyper = (level, decay, float(base is not None))
     later = np.exp(-2j * np.pi * np.outer(taps / BINS, step_basis().nu)) - 1.0
     slopes = np.vstack([slopes, (gain if base is None else base) * later])
     inverse = np.linalg.inv(factor) * allowed
@@ -225,10 +218,9 @@ def _with_echoes(
 
 def _finished(design: Design, found: _Corrected, outer: Array) -> Response:
     """Add the modelled profiles."""
-    own = len(design.allowed)
-    drift = found.drift
-    model = found.step * design.profiles(edge_of(found.gain)) + np.tensordot(drift[own:], outer, 1)
-    model += (drift[2 : own - 1] + drift[own - 1] * design.signs)[:, None]
+    own, layout, drift = len(design.allowed), design.layout, found.drift
+    model = found.step * layout.profiles(edge_of(found.gain, layout.reach(0))) + np.tensordot(drift[own:], outer, 1)
+    model += (drift[2 : own - 1] + drift[own - 1] * layout.signs)[:, None]
     return Response(
         step_basis().nu, found.gain, found.slopes, found.covariance, found.theta, found.step, model, found.chi2,
         found.hyper,
@@ -236,17 +228,52 @@ def _finished(design: Design, found: _Corrected, outer: Array) -> Response:
 
 
 def _wide(nu: Array) -> Complex:
-    return 0.5 + 0.5 * np.cos(np.pi * np.clip((nu - 0.35) / 0.3, 0.0, 1.0)) + 0j
+    """Flat to 0.35 cycles per sample and gone at 0.65: what echoes 3/4 of a sample apart can hold."""
+    return np.asarray(0.5 + 0.5 * np.cos(np.pi * np.clip((nu - 0.35) / 0.3, 0.0, 1.0)), dtype=np.complex128)
 
 
-def _evidence(normal: Array, right: Array, allowed: Array, pull: Array) -> tuple[float, Array, Array]:
-    """Log of the marginal likelihood up to a constant, the solution, and the Cholesky factor.
+def _most_probable(
+    normal: Array,
+    right: Array,
+    allowed: Array,
+    pull: Array,
+    own: slice,
+    taps: npt.NDArray[np.int64],
+    levels: tuple[float, ...],
+    decays: tuple[float, ...],
+) -> tuple[float, float, float]:
+    """Log of the marginal likelihood up to a constant, level and decay of the echoes where it is largest.
 
-    Everything is in units of what the prior allows (``allowed``, its sigmas), which keeps the matrix well posed.
+    All but the echoes is eliminated first; then the eigenvalues for one decay serve every level.
+    """
+    others = np.ones(len(allowed), dtype=bool)
+    others[own] = False
+    scale = allowed[others]
+    inner = normal[np.ix_(others, others)] * np.outer(scale, scale)
+    inner.flat[:: len(scale) + 1] += 1.0
+    cross = normal[others, own] * scale[:, None]
+    target = right[others] * scale - pull[others] / scale
+    solved = np.linalg.solve(inner, np.column_stack([cross, target]))
+    rest = normal[own, own] - cross.T @ solved[:, :-1]
+    aim = right[own] - cross.T @ solved[:, -1]
+    envelope = np.exp(-np.abs(taps / BINS)[None, :] / np.array(decays)[:, None])
+    values, vectors = np.linalg.eigh(rest * envelope[:, :, None] * envelope[:, None, :])
+    seen = np.einsum("dij,di->dj", vectors, envelope * aim) ** 2
+    size = np.array(levels)[:, None, None] ** 2
+    grown = 1.0 + size * np.maximum(values, 0.0)
+    evidence = (size * seen / grown - np.log(grown)).sum(axis=2) / 2.0
+    at = np.unravel_index(int(np.argmax(evidence)), evidence.shape)
+    common = float(target @ solved[:, -1] - np.linalg.slogdet(inner)[1]) / 2.0
+    return float(evidence[at]) + common, float(levels[at[0]]), float(decays[at[1]])
+
+
+def _solve(normal: Array, right: Array, allowed: Array, pull: Array) -> tuple[Array, Array]:
+    """Most probable values, and the Cholesky factor of their precision in units of ``allowed``.
+
+    Units of what the prior allows (its sigmas) keep the matrix well posed.
     """
     whole = normal * np.outer(allowed, allowed)
     whole.flat[:: len(allowed) + 1] += 1.0
     factor = np.linalg.cholesky(whole)
-    half = np.linalg.solve(factor, right * allowed - pull / allowed)
-    solved = np.linalg.solve(factor.T, half) * allowed
-    return float(half @ half / 2 - np.log(np.diag(factor)).sum()), solved, factor
+    solved = np.linalg.solve(whole, right * allowed - pull / allowed) * allowed
+    return solved, factor

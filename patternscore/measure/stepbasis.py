@@ -46,6 +46,28 @@ class StepBasis:
         return len(self.times) // 2
 
 
+def edge_of(spectra: npt.NDArray[np.complex128], reach: int = REACH) -> Array:
+    """Response to a step, less one half.
+
+    Parameters
+    ----------
+    spectra : (n,) or (k, n) complex
+        Transfer functions at the frequencies of the basis.
+    reach : int
+        Samples each way from the edge.
+
+    Returns
+    -------
+    (2 reach BINS + 1,) or (k, ...) float64
+        At every bin, time 0 in the middle.
+    """
+    basis = step_basis()
+    reach = min(reach, REACH) * BINS
+    matrix = basis.matrix[basis.origin - reach : basis.origin + reach + 1]
+    packed = np.concatenate([spectra.real, spectra.imag], axis=-1).astype(np.float32)
+    return np.asarray(packed @ matrix.T, dtype=np.float64)
+
+
 def _frequencies() -> Array:
     """Close where slow ringing makes the response bend, wider where only the edge itself has content."""
     return np.concatenate(
