@@ -1,4 +1,4 @@
-"""The plain ground of a pattern: its slope along the line and down the field, and hum."""
+"""Flat areas of one nominal level, seen all over the picture: slope along the line and down the field, hum."""
 
 from __future__ import annotations
 
@@ -10,22 +10,52 @@ import numpy.typing as npt
 
 from patternscore.errors import Unreadable
 from patternscore.frame import Frame
-from patternscore.measure.patches import SeenPatch
+from patternscore.measure.patches import Cores
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[Any]
 MAINS_HZ = (50.0, 60.0)
-_FEWEST = 6  # patches
+_FEWEST = 6  # areas
+_SEEN = 16.0  # gain in chi-square by which a bar at mains rate is believed
+_OUTLIER = 5.0
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Ground:
-    """Tilt in % over the width and the height; hum amplitude in %, its frequency in Hz (None: none seen)."""
+    """How the level of flat areas changes over the picture.
+
+    Attributes
+    ----------
+    tilt_line, tilt_field : Estimate
+        % of 100 IRE over the active line and over the height.
+    hum : Estimate
+        Peak amplitude, % of 100 IRE.
+    hum_hz : tuple of float
+        Frequencies of the bars believed, Hz; empty where none is seen.
+    """
 
     tilt_line: Estimate
     tilt_field: Estimate
     hum: Estimate
-    hum_hz: float | None
+    hum_hz: tuple[float, ...]
+    _swings: Array
+    _frame: Frame
+
+    def surface(self, columns: Array, rows: Array) -> Array:
+        """Departure in IRE from the level at the middle of the picture, at frame coordinates.
+
+        Only slopes and bars that stand out of the noise count.
+        """
+        along, down = places(self._frame, columns, rows)
+        level = np.zeros(np.broadcast_shapes(along.shape, down.shape))
+        if abs(self.tilt_line.value) > 3.0 * self.tilt_line.sigma:
+            level = level + self.tilt_line.value * along
+        if abs(self.tilt_field.value) > 3.0 * self.tilt_field.sigma:
+            level = level + self.tilt_field.value * down
+        if self.hum_hz:
+            seconds = line_seconds(self._frame, rows)
+            level = level + _bars(seconds, self.hum_hz) @ self._swings
+        return level
 
 
 def line_seconds(frame: Frame, rows: Array) -> Array:
@@ -35,75 +65,159 @@ def line_seconds(frame: Frame, rows: Array) -> Array:
     return np.asarray((second * standard.field_us + (rows // 2) * standard.line_us) * 1e-6)
 
 
-def read_ground(frame: Frame, seen: list[SeenPatch]) -> Ground:
-    """Fit slope and hum to the line means of all ground patches together.
+def places(frame: Frame, columns: Array, rows: Array) -> tuple[Array, Array]:
+    """Distance from the middle in fractions of the active line and of the height, at frame coordinates."""
+    raster = frame.raster
+    along = (columns - raster.left) / raster.width_samples - 0.5
+    return np.asarray(along), np.asarray((rows - raster.top) / raster.height_lines - 0.5)
+
+
+def read_ground(frame: Frame, seen: tuple[Cores, ...]) -> Ground:
+    """Fit slopes and bars at mains rate to the line means of all flat areas together.
 
     Parameters
     ----------
-    seen : list of SeenPatch
-        Patches of one nominal level.
+    seen : tuple of Cores
+        Areas of one nominal level ought to be alike over the picture.
 
     Raises
     ------
     Unreadable
-        When fewer than six patches of ground are in the frame.
+        When fewer than six flat areas are in the frame.
 
     Notes
     -----
-    Hum at 1 x 50 or 60 Hz is fitted with the slopes in one least-squares problem, since a slow bar and a
-    slope look alike; it is left out of the slopes' fit again where it is not seen.
+    Bars at once and twice 50 and 60 Hz are tried, alone and together, in one least-squares problem with the
+    slopes, since a slow bar and a slope look alike; a difference in level between the fields is let free.
     """
-    if len(seen) < _FEWEST:
+    seen = tuple(cores for cores in seen if len(cores))
+    if sum(len(cores) for cores in seen) < _FEWEST:
         raise Unreadable("too little plain ground of the pattern is in the frame")
-    along, down, rows, level, weight = _line_means(seen)
-    plain = np.stack([np.ones_like(along), along - 0.5, down - 0.5], 1)
-    alone = _solve(plain, level, weight)
-    trials = []
-    for mains in MAINS_HZ:
-        phase = 2.0 * np.pi * mains * line_seconds(frame, rows)
-        design = np.concatenate([plain, np.stack([np.sin(phase), np.cos(phase)], 1)], 1)
-        trials.append((_solve(design, level, weight), mains))
-    (solved, covariance, misfit), mains = min(trials, key=lambda trial: trial[0][2])
-    power = float(solved[3] ** 2 + solved[4] ** 2)
-    spread = float(covariance[3, 3] + covariance[4, 4]) / 2
-    amplitude = float(np.sqrt(max(power - 2.0 * spread, 0.0)))
-    hum = Estimate(amplitude, float(np.sqrt(spread)))
-    there = power > 2.0 * 16.0 * spread and misfit < alone[2]
-    if not there:
-        solved, covariance, _ = alone
-    sigma = np.sqrt(np.diag(covariance))
+    means = _line_means(frame, seen)
+    plain = _solve(means, ())
+    trials = [_solve(means, bars) for mains in MAINS_HZ for bars in ((mains,), (2 * mains,), (mains, 2 * mains))]
+    best = min(trials, key=lambda trial: trial.misfit + _SEEN * plain.scale * len(trial.bars))
+    believed = plain.misfit - best.misfit > _SEEN * best.scale * len(best.bars)
+    chosen = best if believed else plain
+    if not believed:
+        best = min((trial for trial in trials if len(trial.bars) == 1), key=lambda trial: trial.misfit)
+    slopes = slice(chosen.levels, chosen.levels + 2)
+    (line, field_), sigma = chosen.solved[slopes], np.sqrt(np.diag(chosen.covariance))[slopes]
     return Ground(
-        Estimate(float(solved[1]), float(sigma[1])),
-        Estimate(float(solved[2]), float(sigma[2])),
-        hum,
-        mains if there else None,
+        Estimate(float(line), float(sigma[0])),
+        Estimate(float(field_), float(sigma[1])),
+        _amplitude(best),
+        best.bars if believed else (),
+        chosen.solved[chosen.levels + 3 :],
+        frame,
     )
 
 
-def _line_means(seen: list[SeenPatch]) -> tuple[Array, Array, Array, Array, Array]:
-    """For each line of each patch: x, y (fractions), row, mean level, weight (samples)."""
-    parts = []
-    for patch in seen:
-        means = patch.levels.mean(1, dtype=np.float64)
-        count = len(means)
-        rows = patch.top + np.arange(count)
-        rect = patch.patch.rect
-        down = patch.y + (np.arange(count) - (count - 1) / 2) / count * (rect.y1 - rect.y0) * 0.6
-        parts.append((np.full(count, patch.x), down, rows, means, np.full(count, patch.levels.shape[1])))
-    x, y, rows, means, weight = (np.concatenate(part) for part in zip(*parts, strict=True))
-    return x, y, rows, means, weight.astype(np.float64)
+@dataclass(frozen=True, slots=True, eq=False)
+class _Means:
+    """Line means of the areas with the columns of every model: levels, slopes, fields, then bars.
+
+    ``normal``, ``right`` and ``power`` are the weighted sums of products of columns and means.
+    """
+
+    columns: Array
+    mean: Array
+    weight: Array
+    area: Array
+    levels: int
+    normal: Array
+    right: Array
+    power: float
 
 
-def _solve(design: Array, level: Array, weight: Array) -> tuple[Array, Array, float]:
-    """Robust weighted least squares: solution, covariance by the residual scatter, and misfit."""
-    keep = np.ones(len(level))
-    for _ in range(2):
-        scaled = weight * keep
-        normal = (design * scaled[:, None]).T @ design
-        solved = np.linalg.solve(normal, (design * scaled[:, None]).T @ level)
-        left = (level - design @ solved) * np.sqrt(weight)
-        spread = 1.4826 * float(np.median(np.abs(left))) + 1e-6
-        keep = (np.abs(left) < 5.0 * spread).astype(np.float64)
-    freedom = max(float(keep.sum()) - design.shape[1], 1.0)
-    misfit = float((keep * left**2).sum() / freedom)
-    return solved, np.linalg.inv(normal) * misfit, misfit
+@dataclass(frozen=True, slots=True, eq=False)
+class _Fit:
+    bars: tuple[float, ...]
+    solved: Array
+    covariance: Array
+    misfit: float
+    scale: float
+    levels: int
+
+
+def _bars(seconds: Array, frequencies: tuple[float, ...]) -> Array:
+    phase = 2.0 * np.pi * seconds[..., None] * np.asarray(frequencies)
+    return np.concatenate([np.sin(phase), np.cos(phase)], -1)
+
+
+def _line_means(frame: Frame, seen: tuple[Cores, ...]) -> _Means:
+    mean, weight, area, along, down, rows, nominal = [], [], [], [], [], [], []
+    first = 0
+    for cores in seen:
+        tall = cores.rows.shape[1]
+        mean.append(cores.levels.mean(2).ravel())
+        weight.append(np.full(mean[-1].size, float(cores.levels.shape[2])))
+        area.append(np.repeat(np.arange(first, first + len(cores)), tall))
+        first += len(cores)
+        x, y = places(frame, cores.columns, cores.rows.ravel())
+        along.append(np.repeat(x, tall))
+        down.append(y)
+        rows.append(cores.rows.ravel())
+        nominal.append(np.repeat(cores.nominal, tall))
+    row = np.concatenate(rows)
+    kinds, which = np.unique(np.concatenate(nominal), return_inverse=True)
+    columns = [
+        (which[:, None] == np.arange(len(kinds))).astype(np.float64),
+        np.concatenate(along)[:, None],
+        np.concatenate(down)[:, None],
+        ((row % 2) - 0.5)[:, None],
+    ]
+    columns.append(_bars(line_seconds(frame, row), _every_bar()))
+    design, level, mass = np.concatenate(columns, 1), np.concatenate(mean).astype(np.float64), np.concatenate(weight)
+    kept = _near_model(design, level, np.sqrt(mass))
+    design, level, mass = design[kept], level[kept], mass[kept]
+    scaled = (design * mass[:, None]).T
+    power = float((mass * level**2).sum())
+    return _Means(design, level, mass, np.concatenate(area)[kept], len(kinds), scaled @ design, scaled @ level, power)
+
+
+def _every_bar() -> tuple[float, ...]:
+    return tuple(mains * times for mains in MAINS_HZ for times in (1.0, 2.0))
+
+
+def _near_model(design: Array, level: Array, root: Array) -> Array:
+    """Which lines do not stand far off a model that holds every bar; something else lies in those that do."""
+    scaled = design * root[:, None]
+    solved = np.linalg.solve(scaled.T @ scaled + 1e-6 * np.eye(design.shape[1]), scaled.T @ (level * root))
+    left = np.abs(level * root - scaled @ solved)
+    return np.asarray(left < _OUTLIER * (1.4826 * float(np.median(left)) + 1e-3))
+
+
+def _solve(means: _Means, bars: tuple[float, ...]) -> _Fit:
+    """Weighted least squares of levels, slopes, fields and these bars."""
+    offset = means.levels + 3
+    every = _every_bar()
+    chosen = [*range(offset)]
+    chosen += [offset + every.index(bar) for bar in bars]
+    chosen += [offset + len(every) + every.index(bar) for bar in bars]
+    inverse = np.linalg.inv(means.normal[np.ix_(chosen, chosen)] + 1e-9 * np.eye(len(chosen)))
+    solved = inverse @ means.right[chosen]
+    misfit = max(means.power - float(solved @ means.right[chosen]), 0.0)
+    left = means.mean - means.columns[:, chosen] @ solved
+    scale = misfit / max(len(left) - len(chosen), 1) * _togetherness(means, left)
+    return _Fit(bars, solved, inverse * scale, misfit, scale, means.levels)
+
+
+def _togetherness(means: _Means, left: Array) -> float:
+    """How much more the lines of one area stray together than lines on their own would."""
+    total = np.bincount(means.area, means.weight * left)
+    power = np.bincount(means.area, (means.weight * left) ** 2)
+    return max(1.0, float((total**2).sum() / max(power.sum(), 1e-12)))
+
+
+def _amplitude(fit: _Fit) -> Estimate:
+    """Half the distance from peak to peak of the bars, the part that noise adds taken out."""
+    count = len(fit.bars)
+    start = fit.levels + 3
+    swings, spread = fit.solved[start:], np.diag(fit.covariance)[start:]
+    if count == 1:
+        noise = float(spread.sum())
+        value = np.sqrt(max(float((swings**2).sum()) - noise, 0.0))
+        return Estimate(float(value), float(np.sqrt(noise / 2.0)))
+    wave = _bars(np.linspace(0.0, 1.0 / min(fit.bars), 96, endpoint=False), fit.bars) @ swings
+    return Estimate(float(np.ptp(wave)) / 2.0, float(np.sqrt(spread.sum() / 2.0)))

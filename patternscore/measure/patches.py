@@ -1,8 +1,9 @@
-"""Flat patches of a plan, as seen in a frame."""
+"""Flat patches of a plan, as seen in a frame: all of one kind gathered into one block of samples."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
@@ -10,105 +11,136 @@ import numpy.typing as npt
 
 from patternscore.frame import Frame
 from patternscore.located import Located
-from patternscore.plan import Patch
+from patternscore.plan import Edge, Patch, Plan, Rect
 from patternscore.warp import Warp
 
 Array = npt.NDArray[Any]
-_SIDE, _ENDS = 0.24, 0.2  # parts of a patch left out at each side, and at top and bottom: edges ring and blur
-_LEAST = 12  # samples that make a patch
+# Parts of a patch left out. Edges blur both ways, but what rings or trails follows them in scanning order.
+_LEAD, _TRAIL, _ENDS = 0.32, 0.16, 0.2
+_SHARE = 0.6  # of the usual size, under which a patch is left out
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class SeenPatch:
-    """The core of a patch in a frame.
+class Cores:
+    """Cores of patches of one kind, cut to one size.
 
     Attributes
     ----------
-    levels : (rows, samples) float32, IRE
-    left, top : int
-        Frame coordinates of its first sample.
-    x, y : float
-        Its middle, picture fractions.
+    patches : tuple of Patch
+        Those that lie inside the frame, in the plan's order.
+    levels : (n, rows, samples) float32, IRE
+    left, top : (n,) int
+        Frame coordinates of the first sample of each.
     """
 
-    patch: Patch
+    patches: tuple[Patch, ...]
     levels: Array
-    left: int
-    top: int
-    x: float
-    y: float
+    left: Array
+    top: Array
 
-    @property
-    def mean(self) -> float:
-        """Mean level, IRE."""
-        return float(self.levels.mean(dtype=np.float64))
+    def __len__(self) -> int:
+        return len(self.patches)
 
     @property
     def count(self) -> int:
-        """Number of samples."""
-        return int(self.levels.size)
+        """Samples of each core."""
+        return int(self.levels.shape[1] * self.levels.shape[2])
 
-    def noise(self) -> tuple[float, int]:
-        """Variance about the row and column means, and its degrees of freedom.
+    @property
+    def nominal(self) -> Array:
+        """Nominal levels, (n,) IRE."""
+        return np.array([patch.level for patch in self.patches])
 
-        What is the same on all rows (ringing of an edge) or all along a row (hum, streaks) does not count.
-        """
-        rows, samples = self.levels.shape
-        levels = self.levels.astype(np.float64)
-        rest = levels - levels.mean(0) - levels.mean(1, keepdims=True) + levels.mean()
-        freedom = (rows - 1) * (samples - 1)
-        return float((rest**2).sum() / max(freedom, 1)), freedom
+    @property
+    def rows(self) -> Array:
+        """Frame line of each row of each core, (n, rows) int."""
+        return np.asarray(self.top[:, None] + np.arange(self.levels.shape[1]))
 
+    @property
+    def columns(self) -> Array:
+        """Frame sample of the middle of each core, (n,) float64."""
+        return np.asarray(self.left + (self.levels.shape[2] - 1) / 2.0)
 
-def seen_patches(frame: Frame, located: Located, patches: tuple[Patch, ...]) -> list[SeenPatch]:
-    """Cores of the patches that lie inside the frame, in the plan's order."""
-    found = []
-    boxes = patch_boxes(located.warp, patches)
-    for patch, (x0, y0, x1, y1) in zip(patches, boxes, strict=True):
-        if x0 < 0 or y0 < 0 or x1 >= frame.samples or y1 >= frame.rows:
-            continue
-        levels = frame.luma[y0 : y1 + 1, x0 : x1 + 1]
-        if levels.size >= _LEAST and min(levels.shape) >= 2:
-            rect = patch.rect
-            middle = (rect.x0 + rect.x1) / 2, (rect.y0 + rect.y1) / 2
-            found.append(SeenPatch(patch, levels, x0, y0, *middle))
-    return found
+    def only(self, kept: Array) -> Cores:
+        """Some of them, by an (n,) bool array."""
+        chosen = tuple(patch for patch, keep in zip(self.patches, kept, strict=True) if keep)
+        return Cores(chosen, self.levels[kept], self.left[kept], self.top[kept])
 
 
-def patch_boxes(warp: Warp, patches: tuple[Patch, ...]) -> Array:
-    """Upright boxes that lie wholly inside the patches' cores, (n, 4) first and last sample and line."""
-    corners = []
-    for patch in patches:
-        core = patch.rect.inset(_SIDE * (patch.rect.x1 - patch.rect.x0), _ENDS * (patch.rect.y1 - patch.rect.y0))
-        corners.append([(core.x0, core.y0), (core.x1, core.y0), (core.x0, core.y1), (core.x1, core.y1)])
-    places = warp.to_frame(np.reshape(corners, (-1, 2))).reshape(-1, 4, 2)
-    x, y = places[..., 0], places[..., 1]
-    return np.stack(
-        [
-            np.ceil(np.maximum(x[:, 0], x[:, 2])),
-            np.ceil(np.maximum(y[:, 0], y[:, 1])),
-            np.floor(np.minimum(x[:, 1], x[:, 3])),
-            np.floor(np.minimum(y[:, 2], y[:, 3])),
-        ],
-        1,
-    ).astype(int)
+def cut_cores(frame: Frame, located: Located, kinds: tuple[tuple[Patch, ...], ...]) -> tuple[Cores, ...]:
+    """Cut the cores of patches out of a frame, kind by kind.
 
-
-def noise_variance(seen: list[SeenPatch], frame: Frame) -> tuple[float, int]:
-    """Variance of the noise in IRE squared, coding noise included, and its degrees of freedom.
-
-    Patches that stand out (something else lies in them) or touch the ends of the coding range are left out.
+    Parameters
+    ----------
+    kinds : tuple of tuples of Patch
+        Patches of one kind are of about one size. Those outside the frame, or much smaller than the usual one
+        of their kind, are left out.
     """
-    margin = 2.0 * frame.code_step
-    inside = [
-        patch
-        for patch in seen
-        if patch.levels.min() > frame.code_floor + margin and patch.levels.max() < frame.code_ceiling - margin
-    ]
-    parts = np.array([patch.noise() for patch in inside]).reshape(-1, 2)
-    if len(parts) == 0:
-        return 0.0, 0
-    usual = float(np.median(parts[:, 0]))
-    kept = parts[parts[:, 0] <= max(3.0 * usual, frame.code_step**2 / 4)]
-    freedom = int(kept[:, 1].sum())
-    return float((kept[:, 0] * kept[:, 1]).sum() / max(freedom, 1)), freedom
+    boxes = _boxes(located.warp, kinds)
+    luma = np.ascontiguousarray(frame.luma)
+    parts = np.split(boxes, np.cumsum([len(kind) for kind in kinds])[:-1])
+    return tuple(_cut(luma, kind, part) for kind, part in zip(kinds, parts, strict=True))
+
+
+def _cut(luma: Array, patches: tuple[Patch, ...], boxes: Array) -> Cores:
+    width = luma.shape[1]
+    size = boxes[:, 2:] - boxes[:, :2] + 1
+    fits = [boxes[:, :2] >= 0, boxes[:, 2:] < (width, luma.shape[0]), size >= 3]
+    inside = np.asarray(np.concatenate(fits, 1).all(1))
+    if inside.any():
+        inside &= (size >= _SHARE * np.median(size[inside], axis=0)).all(1)
+    if not inside.any():
+        return Cores((), np.zeros((0, 3, 3), np.float32), np.zeros(0, np.int64), np.zeros(0, np.int64))
+    samples, rows = (int(least) for least in size[inside].min(0))
+    left, top = (boxes[:, :2] + (size - (samples, rows)) // 2)[inside].T
+    at = (top[:, None, None] + np.arange(rows)[:, None]) * width + left[:, None, None] + np.arange(samples)
+    kept = tuple(patch for patch, keep in zip(patches, inside, strict=True) if keep)
+    return Cores(kept, np.take(luma.ravel(), at), left, top)
+
+
+@lru_cache(maxsize=8)
+def _corners(kinds: tuple[tuple[Patch, ...], ...]) -> Array:
+    """Corners of the cores in picture fractions, (4 n, 2)."""
+    rects = [(p.rect.x0, p.rect.y0, p.rect.x1, p.rect.y1) for kind in kinds for p in kind]
+    x0, y0, x1, y1 = np.array(rects, dtype=np.float64).reshape(-1, 4).T
+    wide, tall = x1 - x0, y1 - y0
+    x0, x1 = x0 + _LEAD * wide, x1 - _TRAIL * wide
+    y0, y1 = y0 + _ENDS * tall, y1 - _ENDS * tall
+    return np.stack([np.stack([x0, x1, x0, x1], 1), np.stack([y0, y0, y1, y1], 1)], 2).reshape(-1, 2)
+
+
+def _boxes(warp: Warp, kinds: tuple[tuple[Patch, ...], ...]) -> Array:
+    """Upright boxes that lie wholly inside the patches' cores, (n, 4) first and last sample and line."""
+    places = warp.to_frame(_corners(kinds)).reshape(-1, 4, 2)
+    x, y = places[..., 0], places[..., 1]
+    first = np.ceil([np.maximum(x[:, 0], x[:, 2]), np.maximum(y[:, 0], y[:, 1])])
+    last = np.floor([np.minimum(x[:, 1], x[:, 3]), np.minimum(y[:, 2], y[:, 3])])
+    return np.concatenate([first, last]).T.astype(np.int64)
+
+
+def beside_edges(plan: Plan) -> tuple[tuple[Patch, ...], ...]:
+    """Flat areas on both sides of a plan's near-vertical edges, as patches, those of one size together.
+
+    Their levels are no references, but all areas of one nominal level ought to be alike over the picture.
+    """
+    groups: dict[bool, list[Patch]] = {}
+    blocks: set[str] = set()
+    for edge in plan.edges:
+        if edge.axis != "h":
+            continue
+        kind = groups.setdefault(edge.place == "centre", [])
+        if edge.block not in blocks:  # what lies before any other edge of a block lies after the one before it
+            kind.append(_beside(edge, after=False))
+        blocks.add(edge.block)
+        kind.append(_beside(edge, after=True))
+    return tuple(tuple(patch for patch in kind if patch.rect.x1 > patch.rect.x0) for kind in groups.values())
+
+
+def _beside(edge: Edge, after: bool) -> Patch:
+    """Largest upright rectangle on one side of an edge, within the distance that the pattern keeps its level."""
+    leftmost, rightmost = min(edge.start[0], edge.end[0]), max(edge.start[0], edge.end[0])
+    if after:
+        rect = Rect(rightmost, edge.start[1], leftmost + edge.clear_after, edge.end[1])
+        return Patch(f"after {edge.name}", rect, edge.after)
+    rect = Rect(rightmost - edge.clear_before, edge.start[1], leftmost, edge.end[1])
+    return Patch(f"before {edge.name}", rect, edge.before)

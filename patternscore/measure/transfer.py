@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 import numpy.typing as npt
@@ -12,8 +12,12 @@ from patternscore.errors import Unreadable
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[Any]
-_HELD = 0.45  # IRE beyond noise by which a held step must stand off the curve
-_ROUNDS = 8
+_GAMMAS = np.geomspace(0.25, 4.0, 49)
+_LOWEST, _HIGHEST = 45.0, 60.0  # nominal levels up to (from) which steps may be held
+_FEWEST = 5  # free steps
+_SEEN = 25.0  # gain in chi-square by which held steps are believed
+_OWN = 0.08  # IRE by which steps stray of themselves
+_ALIVE = 0.6  # of the slope due, from which steps still differ as they should
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -29,7 +33,9 @@ class Transfer:
     covariance : (3, 3) array
         Of black, swing, gamma.
     held_low, held_high : (n,) bool
-        Steps that lie off the curve at its lower and upper end.
+        Steps that are held at one level at the lower and at the upper end.
+    misfit : float
+        Chi-square of the curve and the held steps.
     """
 
     nominal: Array
@@ -41,115 +47,203 @@ class Transfer:
     covariance: Array
     held_low: Array
     held_high: Array
+    misfit: float
 
-    def curve(self, nominal: Array) -> Array:
+    def curve(self, nominal: Array | float) -> Array:
         """Level that the curve gives, IRE."""
-        return np.asarray(self.black + self.swing * np.clip(nominal / 100.0, 0, None) ** self.gamma)
+        part = np.clip(np.asarray(nominal) / 100.0, 0, None)
+        return np.asarray(self.black + self.swing * part**self.gamma)
 
-    def crush(self, end: str) -> Estimate:
+    def exponent(self) -> Estimate:
+        """Gamma."""
+        return Estimate(self.gamma, float(np.sqrt(self.covariance[2, 2])))
+
+    def crush(self, end: Literal["black", "white"]) -> Estimate:
         """Nominal level at which the curve meets the level that the held steps share.
 
-        ``end`` is "black" or "white"; 0 (100) where no step is held.
+        Returns
+        -------
+        Estimate
+            IRE on the pattern; 0 (100) where no step is held.
         """
         held = self.held_low if end == "black" else self.held_high
         if not held.any():
-            idle = 0.0 if end == "black" else 100.0
-            return Estimate(idle, self._doubt(idle, float(self.sigma.min())))
-        pick = self.measured[held]
-        floor = float(pick.min() if end == "black" and len(pick) < 3 else np.median(pick))
-        part = np.clip((floor - self.black) / self.swing, 1e-4, 1.2)
-        level = float(100.0 * part ** (1.0 / self.gamma))
-        inner = self.nominal[held].max() if end == "black" else self.nominal[held].min()
-        spread = float(np.std(pick)) + float(self.sigma[held].mean())
-        beyond = level - inner if end == "black" else inner - level
-        if beyond < 0:  # a soft knee bends before the levels are one: the last held step is the bound
-            level = float(inner)
-        return Estimate(level, self._doubt(level, spread))
+            levels = np.unique(self.nominal)
+            idle, step, own = (0.0, levels[1], self.sigma[0]) if end == "black" else (100.0, levels[-2], self.sigma[-1])
+            return Estimate(idle, self._doubt(float(step), float(own)))
+        weight = 1.0 / np.hypot(self.sigma[held], 0.05) ** 2
+        floor = float((weight * self.measured[held]).sum() / weight.sum())
+        free = ~(self.held_low | self.held_high)
+        if end == "black":
+            bounds = float(self.nominal[held].max()), float(self.nominal[free].min())
+        else:
+            bounds = float(self.nominal[free].max()), float(self.nominal[held].min())
+        part = np.clip((floor - self.black) / self.swing, 0.0, 1.2)
+        level = float(np.clip(100.0 * part ** (1.0 / self.gamma), *bounds))
+        return Estimate(level, self._doubt(level, float(1.0 / np.sqrt(weight.sum()))))
 
     def _doubt(self, nominal: float, spread: float) -> float:
-        """Spread of a level as a spread of nominal level, at most half the distance of steps."""
-        rise = self.swing / 100.0 * self.gamma * max(nominal / 100.0, 0.01) ** (self.gamma - 1.0)
-        return float(min(spread / max(rise, 0.05), 5.0))
+        """Spread of a level, and of the curve there, as a spread of nominal level."""
+        part = max(nominal / 100.0, 0.01)
+        slopes = _slopes(np.array([part]), self.swing, self.gamma)[0]
+        curve = float(slopes @ self.covariance @ slopes)
+        rise = self.swing / 100.0 * self.gamma * part ** (self.gamma - 1.0)
+        return float(min(np.sqrt(spread**2 + curve) / max(rise, 0.02), 5.0))
 
 
-def fit_transfer(nominal: Array, measured: Array, sigma: Array) -> Transfer:
+def fit_transfer(nominal: Array, measured: Array, sigma: Array, held_at: Array | None = None) -> Transfer:
     """Fit the curve, setting aside steps that are held at either end.
 
     Parameters
     ----------
     nominal, measured, sigma : (n,) arrays, IRE
+    held_at : (n,) array, optional
+        Levels that stand for those steps that turn out to be held: what clips after a tilt does not tilt.
 
     Raises
     ------
     Unreadable
-        When fewer than five steps are free, or levels do not rise.
+        When there are too few levels, or they do not rise.
+
+    Notes
+    -----
+    Every number of held steps at each end is tried against every exponent of a grid, black and swing
+    following by least squares; the best is refined by Gauss-Newton. Steps count as held only where that
+    explains them much better than the curve alone, so neither lift nor a gamma over 1, whose slope ends at
+    nought by nature, reads as crush.
     """
     order = np.argsort(nominal, kind="stable")
+    stuck = measured[order] if held_at is None else held_at[order]
     nominal, measured, sigma = nominal[order], measured[order], sigma[order]
-    free = (nominal >= 18.0) & (nominal <= 90.0)
-    if np.count_nonzero(free) < 5:
+    if len(np.unique(nominal)) < _FEWEST or np.ptp(nominal) < 30.0:
         raise Unreadable("the staircase has too few steps for a curve")
-    low = high = np.zeros(len(nominal), dtype=bool)
-    for _ in range(_ROUNDS):
-        solved, covariance = _fit_curve(nominal[free], measured[free], sigma[free])
-        black, swing, gamma = solved
-        off = measured - (black + swing * (nominal / 100.0) ** gamma)
-        reach = np.hypot(3.5 * sigma, _HELD) + 2.0 * _curve_spread(nominal, solved, covariance)
-        new_low = _run((off > reach), nominal < 50.0, from_start=True)
-        new_high = _run((off < -reach), nominal > 50.0, from_start=False)
-        new_free = ~(new_low | new_high)
-        same = bool((new_free == free).all())
-        low, high, free = new_low, new_high, new_free
-        if np.count_nonzero(free) < 5:
-            raise Unreadable("too few steps of the staircase are clear of clipping")
-        if same:
-            break
-    if swing < 5.0:
+    weight = 1.0 / np.hypot(sigma, _OWN) ** 2
+    lows, highs = _ends(nominal)
+    table, gamma, black, swing = _trials(nominal / 100.0, (measured, stuck), weight, lows, highs)
+    scale = max(float(table.min()) / max(len(nominal) - 5, 1), 1.0)
+    ends_held = (lows > 0).astype(np.float64)[:, None] + (highs < len(nominal)).astype(np.float64)[None, :]
+    low, high = np.unravel_index(int((table / scale + _SEEN * ends_held).argmin()), table.shape)
+    if _steps_live_below(nominal, measured, int(lows[low]), gamma[low, high], swing[low, high]):
+        low = np.intp(0)
+    start = np.array([black[low, high], swing[low, high], gamma[low, high]])
+    first, last = int(lows[low]), int(highs[high])
+    solved, covariance = _refine(nominal, measured, sigma, slice(first, last), start)
+    if not solved[1] > 5.0:
         raise Unreadable("the staircase shows no contrast")
-    return Transfer(nominal, measured, sigma, black, swing, gamma, covariance, low, high)
-
-
-def _run(off: Array, side: Array, from_start: bool) -> Array:
-    """Steps off the curve that reach, without a gap of more than one, to the end of the staircase."""
-    flags = (off & side) if from_start else (off & side)[::-1]
-    reach = np.nonzero(flags)[0]
-    held = np.zeros(len(off), dtype=bool)
-    if len(reach) and flags[:2].any():
-        last = int(reach[0])
-        for at in reach:
-            if at - last > 2:
-                break
-            last = int(at)
-        held[: last + 1] = True
-    return held if from_start else held[::-1]
-
-
-def _curve_spread(nominal: Array, solved: Array, covariance: Array) -> Array:
-    slopes = _slopes(nominal, solved)
-    return np.asarray(np.sqrt(np.einsum("ij,jk,ik->i", slopes, covariance, slopes)))
-
-
-def _slopes(nominal: Array, solved: Array) -> Array:
-    part = np.maximum(nominal / 100.0, 1e-6)
-    power = part ** solved[2]
-    return np.stack([np.ones_like(part), power, solved[1] * power * np.log(part)], 1)
-
-
-def _fit_curve(nominal: Array, measured: Array, sigma: Array) -> tuple[Array, Array]:
-    """Gauss-Newton on black, swing, gamma."""
-    weight = 1.0 / np.hypot(sigma, 0.05)
-    solved = np.array([measured[0] - nominal[0] * 0.9, measured[-1] - measured[0], 1.0])
-    solved[:2] = np.polynomial.polynomial.polyfit(nominal / 100.0, measured, 1, w=weight)
-    for _ in range(12):
-        design = _slopes(nominal, solved) * weight[:, None]
-        left = (measured - solved[0] - solved[1] * (nominal / 100.0) ** solved[2]) * weight
-        step, *_ = np.linalg.lstsq(design, left, rcond=None)
-        step[2] = np.clip(step[2], -0.3, 0.3)
-        solved = solved + step
-        solved[2] = np.clip(solved[2], 0.2, 5.0)
-        if abs(step[2]) < 1e-5:
+    for _ in range(2):  # a step that the curve leaves under the level of the held ones is held too
+        moved = _held_now(nominal, stuck, weight, solved, first, last)
+        if moved == (first, last):
             break
-    freedom = max(len(nominal) - 3, 1)
-    excess = max(float((left**2).sum()) / freedom, 1.0)
-    covariance = np.linalg.pinv(design.T @ design) * excess
-    return solved, covariance
+        first, last = moved
+        solved, covariance = _refine(nominal, measured, sigma, slice(first, last), solved)
+    at = np.arange(len(nominal))
+    held_low, held_high = at < first, at >= last
+    levels = np.where(held_low | held_high, stuck, measured)
+    misfit = float(table[low, high])
+    black_, swing_, gamma_ = (float(value) for value in solved)
+    return Transfer(nominal, levels, sigma, black_, swing_, gamma_, covariance, held_low, held_high, misfit)
+
+
+def _ends(nominal: Array) -> tuple[Array, Array]:
+    """Numbers of steps that may be held below, and indices from which they may be held above."""
+    changes = np.nonzero(np.diff(nominal) > 1e-6)[0] + 1
+    lows = [0, *(at for at in changes if nominal[at - 1] <= _LOWEST)]
+    highs = [len(nominal), *(at for at in changes[::-1] if nominal[at] >= _HIGHEST)]
+    middle = [at for at in changes if at < highs[-1]]
+    spare = [at for at in middle if len(np.unique(nominal[at : highs[-1]])) >= 3]
+    return np.array([at for at in lows if at == 0 or at in spare]), np.array(highs)
+
+
+def _trials(
+    part: Array, levels: tuple[Array, Array], weight: Array, lows: Array, highs: Array
+) -> tuple[Array, Array, Array, Array]:
+    """Best chi-square over the exponents, with its exponent, black and swing: (lows, highs) each.
+
+    ``levels`` are those of steps while free, and while held.
+    """
+    power = part[None, :] ** _GAMMAS[:, None]
+    level, stuck = levels
+    w, wy, wyy = (_running(values) for values in (weight, weight * level, weight * level**2))
+    wp, wpp, wpy = (_running(values) for values in (weight * power, weight * power**2, weight * level * power))
+    count, y, yy, p, pp, py = (
+        np.asarray(total[..., None, highs] - total[..., lows, None]) for total in (w, wy, wyy, wp, wpp, wpy)
+    )
+    swing = (count * py - p * y) / np.maximum(count * pp - p**2, 1e-12)
+    black = (y - swing * p) / count
+    misfit = yy - black * y - swing * py
+    wy, wyy = _running(weight * stuck), _running(weight * stuck**2)
+    for end, (first, last) in enumerate(((np.zeros_like(lows), lows), (highs, np.full_like(highs, len(part))))):
+        mass = w[last] - w[first]
+        held = (wy[last] - wy[first]) / np.maximum(mass, 1e-12)
+        apart = wyy[last] - wyy[first] - mass * held**2
+        inner, outer = (last - 1, last) if end == 0 else (first, first - 1)
+        shape = (1, -1, 1) if end == 0 else (1, 1, -1)
+        sign = 1.0 if end == 0 else -1.0
+        for at, way in ((inner, sign), (outer, -sign)):  # the held level lies between its neighbours on the curve
+            curve = black + swing * power[:, np.clip(at, 0, len(part) - 1)].reshape(len(power), *shape[1:])
+            beyond = np.maximum(way * (curve - held.reshape(shape)), 0.0)
+            misfit = misfit + mass.reshape(shape) * beyond**2
+        misfit = misfit + apart.reshape(shape)
+    best = misfit.argmin(0)
+    rest = np.ix_(np.arange(len(lows)), np.arange(len(highs)))
+    # Between the exponents tried, the misfit is a parabola; at the ends of the range it is taken as it is.
+    inner = np.clip(best, 1, len(_GAMMAS) - 2)
+    below, at_best, above = misfit[inner - 1, *rest], misfit[inner, *rest], misfit[inner + 1, *rest]
+    bend = np.maximum(below - 2.0 * at_best + above, 1e-12)
+    least = np.maximum(at_best - (above - below) ** 2 / (8.0 * bend), 0.0)
+    return np.where(best == inner, least, misfit[best, *rest]), _GAMMAS[best], black[best, *rest], swing[best, *rest]
+
+
+def _running(values: Array) -> Array:
+    """Sums of the first 0, 1, 2 ... along the last axis."""
+    return np.concatenate([np.zeros((*values.shape[:-1], 1)), np.cumsum(values, -1)], -1)
+
+
+def _steps_live_below(nominal: Array, measured: Array, low: int, gamma: float, swing: float) -> bool:
+    """Whether steps set aside at black, where the curve is steep, still rise as an even staircase does."""
+    if low == 0:
+        return False
+    reach = float(nominal[low] - nominal[0])
+    due = swing / 100.0 * reach
+    steep = swing * ((nominal[low] / 100.0) ** gamma - (nominal[0] / 100.0) ** gamma)
+    rise = float(measured[low] - measured[nominal <= nominal[0]].mean())
+    return bool(steep > 1.15 * due and rise > _ALIVE * due)
+
+
+def _slopes(part: Array, swing: float, gamma: float) -> Array:
+    """Derivatives of the curve by black, swing and gamma, (n, 3)."""
+    part = np.maximum(part, 1e-6)
+    power = part**gamma
+    return np.stack([np.ones_like(part), power, swing * power * np.log(part)], 1)
+
+
+def _refine(nominal: Array, measured: Array, sigma: Array, free: slice, start: Array) -> tuple[Array, Array]:
+    """Gauss-Newton on black, swing, gamma over the free steps, with the covariance that noise gives."""
+    part, level, sigma = nominal[free] / 100.0, measured[free], sigma[free]
+    root = 1.0 / np.hypot(sigma, _OWN)
+    solved = start.copy()
+    design = np.zeros((len(part), 3))
+    for _ in range(8):
+        design = _slopes(part, solved[1], solved[2]) * root[:, None]
+        left = (level - solved[0] - solved[1] * part ** solved[2]) * root
+        move = np.linalg.lstsq(design, left, rcond=None)[0]
+        move[2] = np.clip(move[2], -0.2, 0.2)
+        solved = solved + move
+        solved[2] = np.clip(solved[2], 0.2, 5.0)
+        if abs(move[2]) < 1e-6:
+            break
+    gain = np.linalg.pinv(design) * root * sigma
+    return solved, np.asarray(gain @ gain.T)
+
+
+def _held_now(nominal: Array, stuck: Array, weight: Array, solved: Array, first: int, last: int) -> tuple[int, int]:
+    """Free steps from first to last, those left out that the curve puts beyond the level of the held ones."""
+    curve = solved[0] + solved[1] * (nominal / 100.0) ** solved[2]
+    count = len(nominal)
+    if first:
+        floor = np.average(stuck[:first], weights=weight[:first])
+        first = int(np.count_nonzero((curve < floor) & (nominal <= _LOWEST))) or first
+    if last < count:
+        ceiling = np.average(stuck[last:], weights=weight[last:])
+        last = count - (int(np.count_nonzero((curve > ceiling) & (nominal >= _HIGHEST))) or count - last)
+    return (first, last) if len(np.unique(nominal[first:last])) >= _FEWEST else (0, count)
