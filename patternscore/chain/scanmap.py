@@ -69,11 +69,12 @@ def picture_points(chain: Chain, times: Map, lines: Map) -> tuple[Map, Map]:
 
     Returns
     -------
-    x, y : (rows, n) float32
+    x, y : float32
+        (rows, n) each, or (1, n) and (rows, 1) where they are all that the sweeps give.
     """
     raster = chain.standard.raster(chain.lines, chain.samples, chain.sample_rate)
     along = chain.sweep_h.position(times, chain.standard.active_us).astype(np.float32)
     down = chain.sweep_v.position(lines, raster.height_lines).astype(np.float32)
     if has_distortion(chain):
         return _undistorted_raster(chain, along, down)
-    return np.broadcast_to(along, (len(lines), len(times))), np.broadcast_to(down[:, None], (len(lines), len(times)))
+    return along[None, :], down[:, None]
