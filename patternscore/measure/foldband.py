@@ -16,6 +16,7 @@ from patternscore.measure.stepshape import StepShape
 
 Array = npt.NDArray[np.float64]
 LIGHTEST = 0.05  # of the bars' contrast above dark bars: black that is taken for black
+EDGE_DOUBT = 1.2  # samples by which the picture's edge may come off the pace of the bars
 DELAY = 2.2  # samples by which the picture's end may come off nominal, as filters delay the signal
 
 
@@ -100,12 +101,15 @@ class Band:
 def unfolded_misfit(band: Band, start: float) -> Array:
     """Departures, (n,), of a band from the scan that does not fold and comes nearest to it.
 
-    That scan is black up to where the picture begins, near ``start`` or later, as it is shifted, delayed or
-    crushed; then it meets the walls where they were read.
+    That scan is black up to where the picture begins: at ``start``, or where the pace of the bars puts its
+    edge x = 0; then it meets the walls where they were read.
     """
     t, walls = band.t, band.edges[1:]
-    first = max(start, float(t[0])) - DELAY
-    begins = np.arange(first, max(float(walls[0]) - 1.0, first + 2 * DELAY), 0.25)[:, None]
+    earliest = max(start, float(t[0]))
+    edge = float(band.met[0])
+    slack = EDGE_DOUBT + 0.1 * float(band.met[band.read][0] - edge) if band.read.any() else EDGE_DOUBT
+    first = max(earliest - DELAY, edge - slack)
+    begins = np.arange(first, max(edge + slack, earliest + DELAY), 0.25)[:, None]
     steps = np.diff(band.content)[1:]
     later = walls > begins[-1, 0]
     beyond = steps[later] @ band.shape.at(t[None, :] - walls[later, None])

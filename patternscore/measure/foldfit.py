@@ -13,9 +13,9 @@ from patternscore.measure.foldview import View
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[np.float64]
-SHARP, BENT = 5, 2  # starts from the coarse searches
+SHARP, BENT = 5, 3  # starts from the coarse searches
 SHARES = (0.0, 0.6, 0.9)  # parts of the step's width that the spot may have
-LENGTHS = (0.1, 0.5, 1.5, 3.5)  # durations of the turn tried, bars
+LENGTHS = (0.1, 0.5, 1.5, 4.0)  # durations of the turn tried, bars
 KEPT = 2  # of them, fitted to the end with every kind of turn
 FLOOR = 0.01  # misfit, of the bars' contrast, that even the true scan may leave in a band
 # What is known beforehand of start (bars off nominal), ratio and duration (bars), as mean and standard

@@ -3,7 +3,8 @@
 A folded scan runs backwards, turns and then goes forward. About the turning point its speed changes in
 proportion to time until it has its full value: the forward speed, or ``ratio`` times that backwards.
 How the backward speed settles tells the kinds of turn apart: a ramp, the quarter sine of a resonant flyback,
-or an exponential approach. A short turn of any kind is a sharp fold.
+an exponential approach, or the quarter sine that ends at the turning point, where the forward scan sets in at
+once. A short turn of any kind is a sharp fold.
 
 The spot acts on the picture and the electrical response on the signal, so the mirrored bars, scanned fast,
 lose less to the spot than the forward ones. How the response seen on the forward bars is shared between the
@@ -22,8 +23,8 @@ from patternscore.measure.foldband import Band
 from patternscore.measure.stepshape import StepShape
 
 Array = npt.NDArray[np.float64]
-Turn = Literal["ramp", "sine", "soft"]
-TURNS: tuple[Turn, ...] = ("ramp", "sine", "soft")
+Turn = Literal["ramp", "sine", "soft", "arch"]
+TURNS: tuple[Turn, ...] = ("ramp", "sine", "soft", "arch")
 PER = 4  # stretches of time per sample over which the picture is averaged
 BEYOND = 6  # samples before and after the band that the response reaches
 OUTSIDE = 0.12  # picture fraction before the edge that the table of the picture holds
@@ -148,7 +149,7 @@ def _way(turn: Turn, time: Array) -> Array:
     """Way made backwards in units of the settling, against time before the turn in the same units."""
     if turn == "ramp":
         return np.where(time < 1.0, 0.5 * time * time, time - 0.5)
-    if turn == "sine":
+    if turn in ("sine", "arch"):
         quarter = np.pi / 2
         return np.where(time < quarter, 1.0 - np.cos(np.minimum(time, quarter)), 1.0 + time - quarter)
     return np.asarray(time + np.expm1(-time))
@@ -158,15 +159,16 @@ def places(look: Look, parameters: Array, turn: Turn) -> Array:
     """Places of folded scans at the borders of the stretches, (c, f + 1)."""
     turning, _, ratio, length = (column[:, None] for column in parameters.T)
     rise = length / (1.0 + ratio)  # from the turning point to full forward speed
-    joined = np.interp(turning + rise, look.borders, look.ahead)
+    lead = rise if turn != "arch" else np.zeros_like(rise)
+    joined = np.interp(turning + lead, look.borders, look.ahead)
     speed = 1.0 / look.band.slope(joined)
-    bottom = joined - 0.5 * speed * rise
+    bottom = joined - 0.5 * speed * lead
     since = look.borders[None, :] - turning
     settle = ratio * rise
     way = speed * ratio * settle * _way(turn, np.maximum(-since, 0.0) / settle)
     gain = np.clip(since, 0.0, None)
     turned = bottom + np.where(since < 0, way, 0.5 * speed / rise * gain * gain)
-    return np.where(since < rise, turned, look.ahead[None, :])
+    return np.where(since < lead, turned, look.ahead[None, :])
 
 
 def folded(look: Look, parameters: Array, turn: Turn) -> Array:

@@ -14,7 +14,7 @@ from patternscore.measure.foldview import LEAST, View
 Array = npt.NDArray[np.float64]
 SHARP_RATIOS = np.geomspace(2.2, 10.5, 27)
 BENT_RATIOS = (2.0, 3.0, 4.5, 6.5, 9.5)
-BENT_TURNS = (1.2, 3.5)  # bars
+BENT_TURNS = (1.2, 3.5, 9.0)  # bars
 PER = 8  # points per sample of the mirrored bars
 
 
