@@ -13,7 +13,6 @@ from patternscore.plan import Grid
 from patternscore.warp import Warp
 
 Array = npt.NDArray[Any]
-_FINE = 4  # points of the common line profile per sample
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,64 +86,68 @@ def _coarse(lines: _Lines, half_width: float) -> Array:
     return np.asarray(lines.offsets[3:-3][top] + np.clip(0.5 * (before - after) / bend, -1, 1))
 
 
-def _shape(lines: _Lines, shifts: Array) -> tuple[Array, Array]:
-    """Common profile of all lines against distance from their centres."""
+def _line_shape(distance: Array, thickness: float, blur: float) -> tuple[Array, Array, Array]:
+    """Line of a thickness seen through a Gaussian blur: level 0 to 1, its slope, its slope by the blur."""
+    from scipy.special import ndtr
+
+    first, last = (distance + thickness / 2) / blur, (distance - thickness / 2) / blur
+    bell_first, bell_last = (np.exp(-0.5 * side**2) / np.sqrt(2.0 * np.pi) for side in (first, last))
+    return ndtr(first) - ndtr(last), (bell_first - bell_last) / blur, (last * bell_last - first * bell_first) / blur
+
+
+def _first_blur(lines: _Lines, shifts: Array, thickness: float) -> float:
+    """Blur of the lines from their second moment."""
     heights = lines.profiles - np.median(lines.profiles, axis=1, keepdims=True)
+    weight = np.clip(heights - 0.15 * heights.max(1, keepdims=True), 0.0, None)
     distance = lines.offsets[None] - shifts[:, None]
-    reach = lines.offsets[-1]
-    bins = np.rint((distance + 2 * reach) * _FINE).astype(int).ravel()
-    size = int(4 * reach * _FINE) + 2
-    bins = np.clip(bins, 0, size - 1)
-    count = np.bincount(bins, minlength=size)
-    total = np.bincount(bins, heights.ravel(), minlength=size)
-    places = np.arange(size) / _FINE - 2 * reach
-    good = count > 0.1 * len(shifts) / _FINE
-    shape = np.interp(places, places[good], total[good] / count[good])
-    # A line's place is the centroid of its upper part: without that the common profile could drift.
-    weight = np.clip(shape - 0.3 * shape.max(), 0.0, None) * (np.abs(places) < reach)
-    places = places - (weight * places).sum() / max(float(weight.sum()), 1e-9)
-    return places, np.convolve(np.pad(shape, 2, mode="edge"), [0.1, 0.2, 0.4, 0.2, 0.1], "valid")
+    spread = float((weight * distance**2).sum() / max(float(weight.sum()), 1e-9))
+    return float(np.sqrt(max(spread - thickness**2 / 12.0, 0.16)))
 
 
 def noise_level(luma: Array) -> float:
-    """rms noise of a frame in IRE, from second differences along the line; most of a pattern is flat."""
-    bend = luma[::3, 2:] - 2.0 * luma[::3, 1:-1] + luma[::3, :-2]
+    """Rms noise of a frame in IRE, from second differences along the line; most of a pattern is flat."""
+    bend = luma[::9, 2:] - 2.0 * luma[::9, 1:-1] + luma[::9, :-2]
     return float(1.4826 * np.median(np.abs(bend)) / np.sqrt(6.0))
 
 
-def _refine(lines: _Lines, shifts: Array, noise: Array, rounds: int = 3) -> tuple[Array, Array, Array]:
-    """Least-squares shift of each line against the common profile.
+def _refine(lines: _Lines, shifts: Array, noise: Array, thickness: float, rounds: int) -> tuple[Array, Array, Array]:
+    """Least-squares shift of each line against the shape of a blurred line; the blur is one for all.
 
     Parameters
     ----------
     noise : (n,) array
         rms noise of each profile, IRE.
+    thickness : float
+        Of the line as drawn, samples or lines.
 
     Returns
     -------
     shifts, sigma, height : (n,) arrays
-        Height is the line's contrast relative to the common profile.
+        Height is the line's contrast, IRE.
     """
+    blur = _first_blur(lines, shifts, thickness)
+    ramp = np.broadcast_to(lines.offsets / lines.offsets[-1], lines.profiles.shape)
     sigma = height = np.ones(len(shifts))
     for _ in range(rounds):
-        places, shape = _shape(lines, shifts)
-        slope = np.gradient(shape, places)
-        distance = lines.offsets[None] - shifts[:, None]
-        level = np.interp(distance, places, shape)
-        rate = np.interp(distance, places, slope)
-        ramp = np.broadcast_to(lines.offsets / lines.offsets[-1], level.shape)
-        design = np.stack([np.ones_like(level), ramp, level, rate], 2)
-        normal = np.swapaxes(design, 1, 2) @ design
-        normal += 1e-6 * np.trace(normal, axis1=1, axis2=2)[:, None, None] * np.eye(4)
-        right = np.swapaxes(design, 1, 2) @ lines.profiles[:, :, None]
+        level, slope, wider = _line_shape(lines.offsets[None] - shifts[:, None], thickness, blur)
+        design = np.stack([np.ones_like(level), ramp, level, slope], 2)
+        turned = np.swapaxes(design, 1, 2)
+        normal = turned @ design
+        normal += 1e-9 * np.trace(normal, axis1=1, axis2=2)[:, None, None] * np.eye(4)
         inverse = np.linalg.inv(normal)
-        solved = (inverse @ right)[:, :, 0]
+        solved = (inverse @ (turned @ lines.profiles[:, :, None]))[:, :, 0]
         height = solved[:, 2]
-        safe = np.maximum(height, 0.1)
-        step = -solved[:, 3] / safe
-        sigma = np.sqrt(inverse[:, 3, 3]) * noise / safe
-        shifts = shifts + np.clip(step, -2.0, 2.0)
+        safe = np.where(np.abs(height) < 1.0, 1.0, height)
+        sigma = np.sqrt(np.maximum(inverse[:, 3, 3], 0.0)) * noise / np.abs(safe)
+        shifts = shifts + np.clip(-solved[:, 3] / safe, -2.0, 2.0)
+        left = lines.profiles - (design @ solved[:, :, None])[:, :, 0]
+        wider = wider * height[:, None]
+        blur = float(np.clip(blur + (left * wider).sum() / max(float((wider**2).sum()), 1e-9), 0.3, 8.0))
     return shifts, sigma, height
+
+
+def _row_pitch(grid: Grid) -> float:
+    return float(np.median(np.diff(grid.rows)))
 
 
 def measure_crossings(
@@ -165,6 +168,8 @@ def measure_crossings(
     index, xy = predicted(grid)
     points = warp.to_frame(xy)
     reach = [max(int(size * (0.34 if wide else 0.16)), 5) for size in cell]
+    thick = [grid.thickness * cell[1] / _row_pitch(grid)] * 2
+    thick[0] *= cell[0] / cell[1]
     clear = (int(np.ceil(0.1 * min(cell))), int(0.33 * min(cell)))
     here = _inside(points, (luma.shape[0], luma.shape[1]), clear[1] + 2.0)
     index, xy, points, arms = index[here], xy[here], points[here], _clear_arms(grid)[here]
@@ -176,7 +181,9 @@ def measure_crossings(
         lines = _profiles(luma, points, slopes, arms[:, axis], axis, reach[axis], clear)
         start = _coarse(lines, 0.05 * cell[axis]) if wide else np.zeros(len(points))
         rows = arms[:, axis].sum(1) * (clear[1] - clear[0] + 1)
-        shifts[:, axis], sigma[:, axis], height = _refine(lines, start, noise / np.sqrt(rows), 2 + (not wide))
+        shifts[:, axis], sigma[:, axis], height = _refine(
+            lines, start, noise / np.sqrt(rows), thick[axis], 2 if wide else 3
+        )
         good &= (height > 0.4 * np.median(height)) & (np.abs(shifts[:, axis]) < reach[axis] - 2)
     # The two lines lean a little: go from the predicted crossing along both to where they meet.
     lean_x = slopes[:, 0, 1] / slopes[:, 1, 1]

@@ -18,7 +18,7 @@ from patternscore.rasteredges import raster_edges
 from patternscore.warp import Warp, fit_warp
 
 Array = npt.NDArray[Any]
-_LEAST_LIKENESS = 0.75  # correlation of the levels seen with those of the plan
+_LEAST_LIKENESS = 0.6  # rank correlation of the levels seen with the plan's tones
 _ROUGH = 1.0  # samples rms
 _TERMS = {1: 3, 2: 6, 3: 10, 4: 15}
 
@@ -154,12 +154,16 @@ def likeness(frame: Frame, plan: Plan, warp: Warp) -> float:
     if np.count_nonzero(inside) < max(8, 0.25 * len(points)):
         return 0.0
     smooth = cv2.blur(frame.luma, (3, 3))
-    seen = cv2.remap(
-        smooth, x[inside].astype(np.float32)[None], y[inside].astype(np.float32)[None], cv2.INTER_LINEAR
-    )[0]
+    across, down = x[inside].astype(np.float32)[None], y[inside].astype(np.float32)[None]
+    seen = cv2.remap(smooth, across, down, cv2.INTER_LINEAR)[0]
     if float(np.std(seen)) < 2.0:
         return 0.0
-    return float(np.corrcoef(_ranks(seen), _ranks(levels[inside]))[0, 1])
+    return float(np.corrcoef(_ranks(seen), _tones(levels[inside]))[0, 1])
+
+
+def _tones(levels: Array) -> Array:
+    """Dark, middle or light: -1, 0, 1."""
+    return np.asarray((levels > 60.0).astype(np.float64) - (levels < 40.0))
 
 
 def _ranks(levels: Array) -> Array:

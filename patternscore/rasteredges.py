@@ -28,10 +28,10 @@ def raster_edges(luma: Array, raster: Raster) -> RasterEdges:
     rows, samples = luma.shape
     wide = min(int(max(raster.left, 0) + 0.15 * raster.width_samples), samples // 3)
     tall = min(int(max(raster.top, 0) + 0.15 * raster.height_lines), rows // 3)
-    along = cv2.blur(luma, (1, _SMOOTH))
-    left, right = along[:, :wide], along[:, ::-1][:, :wide]
-    down = cv2.blur(luma, (4 * _SMOOTH, 1)).T
-    top, bottom = down[:, :tall], down[:, ::-1][:, :tall]
+    left = cv2.blur(luma[:, :wide], (1, _SMOOTH))[:: _SMOOTH - 2]
+    right = cv2.blur(luma[:, -wide:], (1, _SMOOTH))[:: _SMOOTH - 2, ::-1]
+    top = cv2.blur(luma[:tall], (4 * _SMOOTH, 1))[:, :: 2 * _SMOOTH].T
+    bottom = cv2.blur(luma[-tall:], (4 * _SMOOTH, 1))[::-1, :: 2 * _SMOOTH].T
 
     def place(onset: float | None, last: int | None) -> float | None:
         return onset if onset is None or last is None else last - onset

@@ -80,9 +80,7 @@ class Warp:
         return np.stack([dx @ self.coefficients, dy @ self.coefficients], axis=2)
 
 
-def fit_warp(
-    xy: npt.ArrayLike, found: npt.ArrayLike, degree: int, weights: npt.NDArray[Any] | None = None
-) -> Warp:
+def fit_warp(xy: npt.ArrayLike, found: npt.ArrayLike, degree: int, weights: npt.NDArray[Any] | None = None) -> Warp:
     """Least-squares warp through correspondences.
 
     Parameters

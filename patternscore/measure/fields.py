@@ -70,7 +70,8 @@ def field_difference(frame: Frame, located: Located) -> FieldDifference:
     of the edge; a slanted edge meets the lines at all phases, so that lines of one field alone do.
     """
     down, along = [], []
-    for edge in located.plan.edges:
+    centre = [edge for edge in located.plan.edges if edge.place == "centre"]
+    for edge in centre:
         cut = _cut(frame, located, edge)
         if cut is None:
             continue
