@@ -6,12 +6,15 @@ exp(+j 2 pi f t); times are in us.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+import math
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
+
+from patternscore.errors import UsageError
 
 Spectrum = npt.NDArray[Any]
 Response = Callable[[Spectrum], Spectrum]
@@ -52,6 +55,11 @@ class second_order:
         ratio = f / self.mhz
         return np.asarray(1.0 / (1.0 - ratio**2 + 2j * self.damping * ratio))
 
+    @property
+    def damped_mhz(self) -> float:
+        """Frequency of the oscillation after a step, for a damping below 1."""
+        return self.mhz * math.sqrt(1.0 - self.damping**2)
+
 
 @dataclass(frozen=True, slots=True)
 class gaussian:
@@ -62,6 +70,21 @@ class gaussian:
     def __call__(self, f: Spectrum) -> Spectrum:
         """Gain at frequencies f, MHz."""
         return np.asarray(np.exp2(-((f / self.mhz_at_half) ** 2)) + 0j)
+
+
+@dataclass(frozen=True, slots=True)
+class gaussian_spot:
+    """Gaussian of a sigma in us: exp(-2 (pi f sigma)^2)."""
+
+    sigma_us: float
+
+    def __call__(self, f: Spectrum) -> Spectrum:
+        """Gain at frequencies f, MHz."""
+        return np.asarray(np.exp(-2.0 * (np.pi * f * self.sigma_us) ** 2) + 0j)
+
+    def falls_to(self, level: float) -> float:
+        """Frequency in MHz at which the gain falls to a level below 1."""
+        return math.sqrt(-math.log(level) / 2.0) / (math.pi * self.sigma_us)
 
 
 @dataclass(frozen=True, slots=True)
@@ -112,10 +135,22 @@ class delay:
 
 @dataclass(frozen=True, slots=True)
 class zpk:
-    """Zeros and poles in rad/us (as scipy.signal gives them for analogue filters), scaled to gain 1 at 0."""
+    """Zeros, poles and gain in rad/us, as scipy.signal gives them for analogue filters.
 
-    zeros: tuple[complex, ...]
-    poles: tuple[complex, ...]
+    The gain ``k`` is left out of account, for every stage has gain 1 at zero frequency; zeros and poles may
+    be any sequence of numbers other than 0.
+    """
+
+    zeros: Sequence[complex]
+    poles: Sequence[complex]
+    k: float = 1.0
+
+    def __post_init__(self) -> None:
+        for name in ("zeros", "poles"):
+            roots = tuple(complex(root) for root in getattr(self, name))
+            if 0 in roots:
+                raise UsageError(f"a stage cannot have {name} at 0: it must pass zero frequency; leave them out")
+            object.__setattr__(self, name, roots)
 
     def __call__(self, f: Spectrum) -> Spectrum:
         """Complex gain at frequencies f, MHz."""
@@ -140,3 +175,17 @@ class cascade:
         for stage in self.stages:
             gain = gain * stage(f)
         return gain
+
+
+def pole_pairs(stages: tuple[Response, ...]) -> list[second_order]:
+    """Complex pole pairs of the stages that are made of poles."""
+    pairs = []
+    for stage in stages:
+        if isinstance(stage, cascade):
+            pairs += pole_pairs(stage.stages)
+        elif isinstance(stage, second_order) and stage.damping < 1.0:
+            pairs.append(stage)
+        elif isinstance(stage, zpk):
+            above = [pole for pole in stage.poles if pole.imag > 1e-9 * abs(pole)]
+            pairs += [second_order(abs(pole) / (2 * math.pi), -pole.real / abs(pole)) for pole in above]
+    return pairs

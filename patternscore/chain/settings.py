@@ -7,6 +7,7 @@ from typing import Any
 
 from patternscore.chain.responses import Response, cascade, raised_cosine
 from patternscore.chain.sweep import Sweep
+from patternscore.errors import UsageError
 from patternscore.standard import LUMA_CLOCK_MHZ, STANDARD_525, Levels, Standard
 
 NOMINAL_SWEEP = Sweep()
@@ -17,8 +18,9 @@ GRABBER_FILTER = raised_cosine(5.5, 6.75)
 class Chain:
     """Settings of an analogue chain and of the grabber at its end.
 
-    The picture passes, in this order: scan (sweeps, trapezoid, bow, turn, skew), spot, gamma, gain, setup,
-    electrical response, tilt, hum, clipping, line jitter, the grabber's band limit, sampling, noise, coding.
+    The picture passes, in this order: spot, scan (sweeps, trapezoid, bow, skew, turn), gamma, gain, setup,
+    blanking, electrical response, tilt, hum, clipping, the grabber's band limit, line jitter, sampling, noise,
+    coding. Noise is white from sample to sample, so that its rms is what the frame shows.
 
     Attributes
     ----------
@@ -29,7 +31,8 @@ class Chain:
     trapezoid_h, trapezoid_v, bow_h, bow_v : float
         Percent, as on the card.
     spot_us, spot_lines : float
-        Sigma of a Gaussian spot along the line (us at nominal speed) and across the lines.
+        Sigma of a Gaussian spot along the line (us at nominal speed) and across the lines. The spot has this
+        size in the picture: where the beam scans faster, it lasts shorter.
     response : tuple of Response
         Electrical stages, each a callable of MHz.
     gamma, gain, setup : float
@@ -89,6 +92,18 @@ class Chain:
     bits: int | None = 8
     levels: Levels = "video"
     oversample: int = 8
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "response", tuple(self.response))
+        line = self.standard.line_us * self.sample_rate
+        if not 2 <= self.samples <= line or self.lines < 2 or self.oversample < 2:
+            raise UsageError(f"a line holds 2 to {int(line)} samples; rows and oversample must be 2 or more")
+        if min(self.gamma, self.gain) <= 0 or min(self.spot_us, self.spot_lines, self.jitter_ns, self.wander_ns) < 0:
+            raise UsageError("gamma and gain must be above 0, spot, jitter and wander 0 or more")
+        if max(abs(self.rotation), abs(self.skew)) > 30.0:
+            raise UsageError("rotation and skew are limited to 30 degrees")
+        if max(map(abs, (self.trapezoid_h, self.trapezoid_v, self.bow_h, self.bow_v))) > 20.0:
+            raise UsageError("trapezoid and bow are limited to 20 %")
 
     @property
     def lines(self) -> int:

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import cache
+from functools import lru_cache
 
 import numpy as np
 import numpy.typing as npt
+
+from patternscore.errors import UsageError
 
 Array = npt.NDArray[np.float64]
 _POINTS = 40_001
@@ -45,6 +47,12 @@ class Sweep:
     retrace: float = 5.0
     turn: float = 0.15
 
+    def __post_init__(self) -> None:
+        if self.size <= 0 or self.droop >= 1 or self.s_error <= -1 or self.retrace <= 0:
+            raise UsageError("a sweep must run forward: give size > 0, droop < 1, s_error > -1, retrace > 0")
+        if min(self.fold_start, self.fold_end, self.turn) < 0:
+            raise UsageError("fold_start, fold_end and turn are durations; give 0 or more")
+
     def position(self, time: npt.ArrayLike, duration: float) -> Array:
         """Picture fraction scanned at a time.
 
@@ -64,9 +72,11 @@ class Sweep:
         return np.interp(np.asarray(time, dtype=np.float64), grid, rate)
 
 
-@cache
+@lru_cache(maxsize=64)
 def _curve(sweep: Sweep, duration: float) -> tuple[Array, Array, Array]:
     """Times, positions and speeds on a fine grid that reaches well beyond the active part."""
+    if max(sweep.fold_start, sweep.fold_end) + sweep.turn > 0.5 * duration:
+        raise UsageError(f"a fold must end before the middle of the active part, {duration / 2:.4g}")
     grid = np.linspace(-0.25 * duration, 1.25 * duration, _POINTS)
     forward = _forward_speed(sweep, grid / duration) / duration
     turned = forward * _turns(sweep, grid, duration)
