@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 import numpy.typing as npt
 
-from patternscore.measure.foldmodel import TURNS, Look, Turn, folded, look_at, with_turn
+from patternscore.measure.foldmodel import TURNS, Look, Turn, folded, look_at, lowest, with_turn
 from patternscore.measure.foldsearch import bent_starts, sharp_starts
 from patternscore.measure.foldview import View
 from patternscore.reading import Estimate
@@ -21,6 +21,9 @@ FLOOR = 0.01  # misfit, of the bars' contrast, that even the true scan may leave
 # What is known beforehand of start (bars off nominal), ratio and duration (bars), as mean and standard
 # deviation, the last two of their logarithms: weak, and decisive only where the bars leave it open.
 KNOWN_START, KNOWN_RATIO, KNOWN_TURN = (0.0, 0.15), (np.log(4.8), 0.6), (np.log(0.25), 1.0)
+# Where the scanned picture is the whole chart, the scan turns at its very edge: as likely as all other places
+# together. AT_EDGE is how near (bars), FAVOUR what that is worth in chi-squared.
+AT_EDGE, FAVOUR = 0.03, 8.0
 STEPS = np.array([0.02, 0.02, 0.02, 0.05])
 
 
@@ -35,13 +38,21 @@ class FoldFit:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
+class _Kind:
+    """What is not fitted: the bands as one spot sees them, the kind of turn, and whether it lies at x = 0."""
+
+    looks: list[Look]
+    turn: Turn = "ramp"
+    at_edge: bool = False
+
+
+@dataclass(frozen=True, slots=True, eq=False)
 class _Endings:
-    """Where descents ended: free parameters (c, 4), cost as chi-squared, and the looks and turn they used."""
+    """Where descents of one kind ended: free parameters (c, 4) and cost as chi-squared."""
 
     free: Array
     cost: Array
-    looks: list[Look]
-    turn: Turn
+    kind: _Kind
 
     def best(self, count: int) -> Array:
         """Free parameters of the best few."""
@@ -68,7 +79,7 @@ def fit_fold(view: View) -> FoldFit:
     lengths = (free[:, 0] - free[:, 1]) * view.bar
     length = float(weights @ lengths)
     spread = float(weights @ (lengths - length) ** 2)
-    noise, misfit = problem.judge(best.best(1)[0], best.looks, best.turn)
+    noise, misfit = problem.judge(best.best(1)[0], best.kind)
     return FoldFit(
         Estimate(length, float(np.sqrt(noise + spread))),
         float(weights @ free[:, 0]) * view.bar,
@@ -83,13 +94,14 @@ def _explore(problem: _Problem) -> list[_Endings]:
     looks = {share: [look_at(band, share, view.blanked) for band in view.bands] for share in SHARES}
     sharp = with_turn(sharp_starts(view, SHARP), LENGTHS[1] * view.bar)
     starts = problem.free(np.concatenate([sharp, bent_starts(view, looks[SHARES[1]], BENT)]))
-    first = [problem.descend(starts, looks[share], "ramp", 5) for share in (SHARES[0], SHARES[-1])]
+    first = [problem.descend(starts, _Kind(looks[share]), 5) for share in (SHARES[0], SHARES[-1])]
     kept = np.concatenate([ending.best(KEPT) for ending in first])
-    shared = [problem.descend(kept, looks[share], "ramp", 5) for share in SHARES]
+    shared = [problem.descend(kept, _Kind(looks[share]), 5) for share in SHARES]
     best = min(shared, key=lambda ending: float(ending.cost.min()))
     found = problem.parameters(best.best(1))
     turned = problem.free(np.concatenate([with_turn(found, length * view.bar) for length in LENGTHS]))
-    return [*shared, *(problem.descend(turned, best.looks, turn, 9) for turn in TURNS)]
+    kinds = [_Kind(best.kind.looks, turn, at_edge) for turn in TURNS for at_edge in (False, True)]
+    return [*shared, *(problem.descend(turned, kind, 9) for kind in kinds)]
 
 
 class _Problem:
@@ -116,34 +128,34 @@ class _Problem:
         logs = np.log(parameters[:, 2:] / np.array([1.0, bar]))
         return np.concatenate([parameters[:, :2] / bar, logs], axis=1)
 
-    def left(self, free: Array, looks: list[Look], turn: Turn) -> Array:
-        """Weighted departures for several sets of free parameters, the last four from what is known."""
+    def left(self, free: Array, kind: _Kind) -> Array:
+        """Weighted departures for several sets of free parameters, the last five from what is known."""
         parameters = self.parameters(free)
-        levels = [folded(look, parameters, turn) for look in looks]
+        levels = [folded(look, parameters, kind.turn) for look in kind.looks]
         departure = (np.concatenate(levels, axis=1) - self.target) / self.unit
-        return np.concatenate([departure, (free - self.known) * self.pull], axis=1)
+        bottom = lowest(kind.looks[0], parameters, kind.turn)[0] * kind.looks[0].band.slope(0.0) / self.view.bar
+        pinned = bottom / AT_EDGE if kind.at_edge else np.zeros_like(bottom)
+        return np.concatenate([departure, (free - self.known) * self.pull, pinned], axis=1)
 
-    def slopes(self, free: Array, looks: list[Look], turn: Turn, left: Array) -> Array:
+    def slopes(self, free: Array, kind: _Kind, left: Array) -> Array:
         """Slopes of the departures by each free parameter, (c, 4, n)."""
         count = free.shape[0]
         moved = (free[:, None, :] + np.diag(STEPS)[None, :, :]).reshape(4 * count, 4)
-        return np.asarray(
-            (self.left(moved, looks, turn).reshape(count, 4, -1) - left[:, None, :]) / STEPS[None, :, None]
-        )
+        return np.asarray((self.left(moved, kind).reshape(count, 4, -1) - left[:, None, :]) / STEPS[None, :, None])
 
-    def descend(self, starts: Array, looks: list[Look], turn: Turn, most: int) -> _Endings:
+    def descend(self, starts: Array, kind: _Kind, most: int) -> _Endings:
         """Levenberg-Marquardt from several starts side by side."""
         free, damping = starts.copy(), np.full(starts.shape[0], 1e-2)
-        left = self.left(free, looks, turn)
+        left = self.left(free, kind)
         cost = np.sum(left * left, axis=1)
         for _ in range(most):
-            slopes = self.slopes(free, looks, turn, left)
+            slopes = self.slopes(free, kind, left)
             normal = slopes @ np.swapaxes(slopes, 1, 2)
             held = np.einsum("cii->ci", normal) * damping[:, None] + 1e-9
             normal += held[:, :, None] * np.eye(4)
             move = -np.linalg.solve(normal, slopes @ left[:, :, None])[:, :, 0]
             move = np.clip(move, [-0.4, -0.15, -0.4, -0.8], [0.4, 0.15, 0.4, 0.8])
-            fresh = self.left(free + move, looks, turn)
+            fresh = self.left(free + move, kind)
             better = np.sum(fresh * fresh, axis=1) < cost
             free = np.where(better[:, None], free + move, free)
             left = np.where(better[:, None], fresh, left)
@@ -152,15 +164,15 @@ class _Problem:
             damping = np.where(better, np.maximum(damping / 5, 1e-6), damping * 10)
             if np.all(better & (gain < 1e-2)):
                 break
-        return _Endings(free, cost, looks, turn)
+        return _Endings(free, cost - (FAVOUR if kind.at_edge else 0.0), kind)
 
-    def judge(self, free: Array, looks: list[Look], turn: Turn) -> tuple[float, float]:
+    def judge(self, free: Array, kind: _Kind) -> tuple[float, float]:
         """Variance of the fold's length from noise, samples squared, and rms misfit."""
-        left = self.left(free[None, :], looks, turn)
-        slopes = self.slopes(free[None, :], looks, turn, left)[0]
+        left = self.left(free[None, :], kind)
+        slopes = self.slopes(free[None, :], kind, left)[0]
         covariance = np.linalg.inv(slopes @ slopes.T + 1e-9 * np.eye(4))
         # The departures are weighted with the floor; noise alone moves the result by less.
-        data = slopes[:, :-4] @ slopes[:, :-4].T * (self.noise / self.unit) ** 2
+        data = slopes[:, :-5] @ slopes[:, :-5].T * (self.noise / self.unit) ** 2
         spread = covariance @ data @ covariance
         along = np.array([self.view.bar, -self.view.bar, 0.0, 0.0])
-        return float(along @ spread @ along), float(np.sqrt(np.mean((left[0, :-4] * self.unit) ** 2)))
+        return float(along @ spread @ along), float(np.sqrt(np.mean((left[0, :-5] * self.unit) ** 2)))

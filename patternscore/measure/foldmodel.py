@@ -155,18 +155,27 @@ def _way(turn: Turn, time: Array) -> Array:
     return np.asarray(time + np.expm1(-time))
 
 
-def places(look: Look, parameters: Array, turn: Turn) -> Array:
-    """Places of folded scans at the borders of the stretches, (c, f + 1)."""
-    turning, _, ratio, length = (column[:, None] for column in parameters.T)
-    rise = length / (1.0 + ratio)  # from the turning point to full forward speed
-    lead = rise if turn != "arch" else np.zeros_like(rise)
+def lowest(look: Look, parameters: Array, turn: Turn) -> tuple[Array, Array, Array]:
+    """Where the folded scan turns (picture fraction), its forward speed there, and how long it takes to reach it.
+
+    All are columns, (c, 1); speeds are picture fractions per sample.
+    """
+    turning, ratio, length = parameters[:, :1], parameters[:, 2:3], parameters[:, 3:]
+    lead = length / (1.0 + ratio) if turn != "arch" else np.zeros_like(turning)
     joined = np.interp(turning + lead, look.borders, look.ahead)
     speed = 1.0 / look.band.slope(joined)
-    bottom = joined - 0.5 * speed * lead
+    return joined - 0.5 * speed * lead, speed, lead
+
+
+def places(look: Look, parameters: Array, turn: Turn) -> Array:
+    """Places of folded scans at the borders of the stretches, (c, f + 1)."""
+    bottom, speed, lead = lowest(look, parameters, turn)
+    turning, ratio = parameters[:, :1], parameters[:, 2:3]
+    rise = parameters[:, 3:] / (1.0 + ratio)
     since = look.borders[None, :] - turning
     settle = ratio * rise
     way = speed * ratio * settle * _way(turn, np.maximum(-since, 0.0) / settle)
-    gain = np.clip(since, 0.0, None)
+    gain = np.maximum(since, 0.0)
     turned = bottom + np.where(since < 0, way, 0.5 * speed / rise * gain * gain)
     return np.where(since < lead, turned, look.ahead[None, :])
 
