@@ -24,8 +24,8 @@ KEYS = (
     "position_error", "rotation", "skew", "trapezoid_h", "trapezoid_v", "bow_h", "bow_v", "aspect_error",
 )  # fmt: skip
 # Terms of the distortion, as exponents of the coordinate itself and of the other one: place, size, lean and
-# bend of each line, a size that changes across (trapezoid) and bends (bow).
-_TERMS = ((0, 0), (1, 0), (0, 1), (0, 2), (1, 1), (1, 2))
+# bend of each line, a size that changes across (trapezoid) and bends (bow), and what a turn makes of a bow.
+_TERMS = ((0, 0), (1, 0), (0, 1), (0, 2), (1, 1), (1, 2), (2, 1))
 _SWEEP = (2, 3, 4, 5)  # powers of the frame coordinate that undo the sweep's own curve
 _FEWEST = 24  # crossings
 
@@ -62,9 +62,7 @@ def read_grid(frame: Frame, located: Located) -> Findings:
             findings.add(key, unit, estimate, "crosshatch")
         error, ideal = position_error(crossings, frame.raster)
         findings.add("position_error", "% of PH", error, "crosshatch")
-        findings.traces["grid"] = GridTrace(
-            crossings.index, ideal, crossings.found, model.left_over, model.parts()
-        )
+        findings.traces["grid"] = GridTrace(crossings.index, ideal, crossings.found, model.left_over, model.parts())
     except Unreadable as why:
         findings.miss(why.reason, *KEYS)
     return findings
@@ -127,9 +125,13 @@ class Axis:
         slope = 1.0 + np.stack([k * seen ** (k - 1) for k in _SWEEP], -1) @ self.sweep
         return np.asarray(np.maximum(slope, 0.2))
 
-    def share(self, weights: Array) -> Estimate:
-        """A combination of distortion terms over half the size of the picture."""
-        half = float(self.terms[1] + self.terms[5] / 3.0)
+    def share(self, weights: Array, across: float = 1.0 / 3.0) -> Estimate:
+        """A combination of distortion terms over half the size of the picture.
+
+        ``across`` is the square of the other coordinate at which the size counts: a third is its mean, 1 is
+        at the corners.
+        """
+        half = float(self.terms[1] + self.terms[5] * across)
         inner = self.covariance[: len(_TERMS), : len(_TERMS)]
         sigma = float(np.sqrt(weights @ inner @ weights))
         return Estimate(float(weights @ self.terms) / half, sigma / abs(half))
@@ -159,8 +161,9 @@ class Geometry:
     def lean(self, axis: int) -> Estimate:
         """Angle of the horizontals (axis 0) or verticals (axis 1) in degrees, clockwise positive."""
         other = 1 - axis
-        drop = (_outline()[:, 2] - _outline()[:, 0]).mean(0) / 2
-        found = self.axes[other].share(drop)
+        # From corner to corner, where no bow bends the line.
+        drop = (_outline()[::2, 2] - _outline()[::2, 0]).mean(0) / 2
+        found = self.axes[other].share(drop, across=1.0)
         # Horizontals drop along x; verticals lean clockwise where their top lies to the right.
         tangent = found.value / ASPECT if axis == 0 else -found.value * ASPECT
         slope = (1 / ASPECT if axis == 0 else ASPECT) / (1 + tangent**2)
