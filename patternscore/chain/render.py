@@ -54,7 +54,7 @@ def grab(chain: Chain, picture: npt.NDArray[Any] | None = None, seed: int = 0) -
     >>> soft = Chain(response=(responses.first_order(1.8),), noise_db=40.0)
     >>> peaked = soft.changed(response=(responses.first_order(1.8), responses.lead(3.0, 9.0)))
     >>> [round(truth(chain)["bandwidth_h"], 2) for chain in (soft, peaked)]
-    [1.8, 2.69]
+    [1.8, 2.78]
     >>> grab(peaked).luma.shape
     (480, 720)
     """

@@ -12,9 +12,7 @@ from patternscore.chain.settings import Chain
 from patternscore.standard import ASPECT
 
 Map = npt.NDArray[Any]
-_NODES = 12
-_SPAN = 1.6  # picture fractions, about the middle, over which the inverse is tabulated
-_REACH = (0.5 - _SPAN / 2, 0.5 + _SPAN / 2)
+_NODES = 14
 
 
 def has_distortion(chain: Chain) -> bool:
@@ -23,25 +21,38 @@ def has_distortion(chain: Chain) -> bool:
     return any(term != 0 for term in terms)
 
 
+def _swelling(chain: Chain, u: Map, v: Map) -> tuple[Map, Map]:
+    """Factors on width and height at a point (-1 to 1), from trapezoid and bow."""
+    wide = 1 + chain.trapezoid_h / 200 * v + chain.bow_h / 50 * (1 - v * v)
+    tall = 1 + chain.trapezoid_v / 200 * u + chain.bow_v / 50 * (1 - u * u)
+    return wide, tall
+
+
 def distort(chain: Chain, x: Map, y: Map) -> tuple[Map, Map]:
-    """Where a picture point (fractions) appears on an otherwise perfect raster."""
+    """Where a picture point (fractions) appears on an otherwise perfect raster.
+
+    Trapezoid and bow act first, then skew (it tilts the verticals), then turn.
+    """
     u, v = 2 * x - 1, 2 * y - 1
-    wide = 0.5 * u * (1 + chain.trapezoid_h / 200 * v + chain.bow_h / 50 * (1 - v * v))
-    tall = 0.5 * v * (1 + chain.trapezoid_v / 200 * u + chain.bow_v / 50 * (1 - u * u))
-    lean, turn = np.tan(np.radians(chain.skew)), np.radians(chain.rotation)
-    wide = wide * ASPECT - tall * lean
-    across = wide * np.cos(turn) - tall * np.sin(turn)
-    down = wide * np.sin(turn) + tall * np.cos(turn)
-    return 0.5 + across / ASPECT, 0.5 + down
+    wide, tall = _swelling(chain, u, v)
+    across, down = 0.5 * u * wide * ASPECT, 0.5 * v * tall
+    across = across - down * np.tan(np.radians(chain.skew))
+    cosine, sine = np.cos(np.radians(chain.rotation)), np.sin(np.radians(chain.rotation))
+    return 0.5 + (across * cosine - down * sine) / ASPECT, 0.5 + across * sine + down * cosine
 
 
-def undistort(chain: Chain, x: Map, y: Map, rounds: int = 30) -> tuple[Map, Map]:
-    """Inverse of ``distort``, by fixed-point iteration (the distortions are small)."""
-    px, py = x, y
+def undistort(chain: Chain, x: Map, y: Map, rounds: int = 60) -> tuple[Map, Map]:
+    """Inverse of ``distort``: turn and skew exactly, trapezoid and bow by fixed-point iteration."""
+    across, down = (x - 0.5) * ASPECT, y - 0.5
+    cosine, sine = np.cos(np.radians(chain.rotation)), np.sin(np.radians(chain.rotation))
+    across, down = across * cosine + down * sine, down * cosine - across * sine
+    across = across + down * np.tan(np.radians(chain.skew))
+    u = flat_u = across * 2 / ASPECT
+    v = flat_v = down * 2
     for _ in range(rounds):
-        qx, qy = distort(chain, px, py)
-        px, py = px + (x - qx), py + (y - qy)
-    return px, py
+        wide, tall = _swelling(chain, u, v)
+        u, v = flat_u / wide, flat_v / tall
+    return 0.5 + u / 2, 0.5 + v / 2
 
 
 def _undistorted_raster(chain: Chain, along: Map, down: Map) -> tuple[Map, Map]:
@@ -50,12 +61,16 @@ def _undistorted_raster(chain: Chain, along: Map, down: Map) -> tuple[Map, Map]:
     The inverse is smooth: it is tabulated at Chebyshev nodes and is then a product of three matrices.
     """
     nodes = cheb.chebpts1(_NODES)
-    x, y = np.meshgrid(_SPAN / 2 * nodes + 0.5, _SPAN / 2 * nodes + 0.5)
     to_series = np.linalg.inv(cheb.chebvander(nodes, _NODES - 1))
-    basis_x = cheb.chebvander((np.clip(along, *_REACH) - 0.5) * 2 / _SPAN, _NODES - 1).astype(np.float32)
-    basis_y = cheb.chebvander((np.clip(down, *_REACH) - 0.5) * 2 / _SPAN, _NODES - 1).astype(np.float32)
+    middles, halves, bases = [], [], []
+    for places in (along, down):
+        middles.append((places.max() + places.min()) / 2)
+        halves.append((places.max() - places.min()) / 2)
+        basis = cheb.chebvander((places - middles[-1]) / halves[-1], _NODES - 1)
+        bases.append(basis.astype(np.float32))
+    x, y = np.meshgrid(middles[0] + halves[0] * nodes, middles[1] + halves[1] * nodes)
     tables = (to_series @ part @ to_series.T for part in undistort(chain, x, y))
-    px, py = (basis_y @ table.astype(np.float32) @ basis_x.T for table in tables)
+    px, py = (bases[1] @ table.astype(np.float32) @ bases[0].T for table in tables)
     return px, py
 
 
@@ -73,8 +88,8 @@ def picture_points(chain: Chain, times: Map, lines: Map) -> tuple[Map, Map]:
         (rows, n) each, or (1, n) and (rows, 1) where they are all that the sweeps give.
     """
     raster = chain.standard.raster(chain.lines, chain.samples, chain.sample_rate)
-    along = chain.sweep_h.position(times, chain.standard.active_us).astype(np.float32)
-    down = chain.sweep_v.position(lines, raster.height_lines).astype(np.float32)
+    along = chain.sweep_h.position(times, chain.standard.active_us)
+    down = chain.sweep_v.position(lines, raster.height_lines)
     if has_distortion(chain):
         return _undistorted_raster(chain, along, down)
-    return along[None, :], down[:, None]
+    return along[None, :].astype(np.float32), down[:, None].astype(np.float32)

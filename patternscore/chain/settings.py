@@ -100,10 +100,10 @@ class Chain:
             raise UsageError(f"a line holds 2 to {int(line)} samples; rows and oversample must be 2 or more")
         if min(self.gamma, self.gain) <= 0 or min(self.spot_us, self.spot_lines, self.jitter_ns, self.wander_ns) < 0:
             raise UsageError("gamma and gain must be above 0, spot, jitter and wander 0 or more")
-        if max(abs(self.rotation), abs(self.skew)) > 30.0:
-            raise UsageError("rotation and skew are limited to 30 degrees")
-        if max(map(abs, (self.trapezoid_h, self.trapezoid_v, self.bow_h, self.bow_v))) > 20.0:
-            raise UsageError("trapezoid and bow are limited to 20 %")
+        if max(abs(self.rotation), abs(self.skew)) > 10.0:
+            raise UsageError("rotation and skew are limited to 10 degrees")
+        if max(map(abs, (self.trapezoid_h, self.trapezoid_v, self.bow_h, self.bow_v))) > 5.0:
+            raise UsageError("trapezoid and bow are limited to 5 %")
 
     @property
     def lines(self) -> int:
