@@ -5,13 +5,17 @@ from __future__ import annotations
 from dataclasses import dataclass
 from functools import lru_cache
 
+import numpy as np
+
 from patternscore.errors import Unreadable
 from patternscore.frame import Frame
 from patternscore.located import Located
 from patternscore.measure.ground import Ground, read_ground
-from patternscore.measure.noise import Noise, read_noise
+from patternscore.measure.noise import Noise, coding_noise, read_noise
 from patternscore.measure.patches import Cores, beside_edges, cut_cores
 from patternscore.plan import Patch, Plan
+
+_CLEAR = 0.8  # IRE
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -49,7 +53,18 @@ def flat_areas(frame: Frame, located: Located) -> FlatAreas:
     except Unreadable as why:
         noise = why
     try:
-        ground = read_ground(frame, (field, *beside))
+        sure = noise if isinstance(noise, Noise) else coding_noise(frame)
+        coding = float(sure.of_mean(np.inf, frame.code_step))
+        ground = read_ground(frame, (field, *(_unclipped(cores, flats) for cores in beside)), coding)
     except Unreadable as why:
         ground = why
     return FlatAreas(field, steps, flats, noise, ground)
+
+
+def _unclipped(areas: Cores, flats: Cores) -> Cores:
+    """Those areas that lie clear of the levels of the black and the white patch; clipping hides slopes and bars."""
+    if not len(flats) or not len(areas):
+        return areas
+    ends = flats.levels.mean((1, 2))[[int(flats.nominal.argmin()), int(flats.nominal.argmax())]]
+    level = areas.levels.mean((1, 2))
+    return areas.only((level > ends[0] + _CLEAR) & (level < ends[1] - _CLEAR))

@@ -72,13 +72,15 @@ def places(frame: Frame, columns: Array, rows: Array) -> tuple[Array, Array]:
     return np.asarray(along), np.asarray((rows - raster.top) / raster.height_lines - 0.5)
 
 
-def read_ground(frame: Frame, seen: tuple[Cores, ...]) -> Ground:
+def read_ground(frame: Frame, seen: tuple[Cores, ...], coding: float = 0.0) -> Ground:
     """Fit slopes and bars at mains rate to the line means of all flat areas together.
 
     Parameters
     ----------
     seen : tuple of Cores
         Areas of one nominal level ought to be alike over the picture.
+    coding : float
+        Error in IRE by which coding may shift the mean of an area, noise or not.
 
     Raises
     ------
@@ -88,46 +90,43 @@ def read_ground(frame: Frame, seen: tuple[Cores, ...]) -> Ground:
     Notes
     -----
     Bars at once and twice 50 and 60 Hz are tried, alone and together, in one least-squares problem with the
-    slopes, since a slow bar and a slope look alike; a difference in level between the fields is let free.
+    slopes, since a slow bar and a slope look alike; a difference between the fields is let free at each nominal level.
     """
     seen = tuple(cores for cores in seen if len(cores))
     if sum(len(cores) for cores in seen) < _FEWEST:
         raise Unreadable("too little plain ground of the pattern is in the frame")
-    means = _line_means(frame, seen)
+    means = _line_means(frame, seen, coding)
     plain = _solve(means, ())
     trials = [_solve(means, bars) for mains in MAINS_HZ for bars in ((mains,), (2 * mains,), (mains, 2 * mains))]
-    best = min(trials, key=lambda trial: trial.misfit + _SEEN * plain.scale * len(trial.bars))
+    local = 60.0 if frame.standard.name == "525" else 50.0  # the mains where the standard was at home
+    best = min(trials, key=lambda trial: trial.cost(local))
     believed = plain.misfit - best.misfit > _SEEN * best.scale * len(best.bars)
     chosen = best if believed else plain
     if not believed:
         best = min((trial for trial in trials if len(trial.bars) == 1), key=lambda trial: trial.misfit)
-    slopes = slice(chosen.levels, chosen.levels + 2)
-    (line, field_), sigma = chosen.solved[slopes], np.sqrt(np.diag(chosen.covariance))[slopes]
-    return Ground(
-        Estimate(float(line), float(sigma[0])),
-        Estimate(float(field_), float(sigma[1])),
-        _amplitude(best),
-        best.bars if believed else (),
-        chosen.solved[chosen.levels + 3 :],
-        frame,
-    )
+    line, down = (chosen.estimate(means.slopes + which) for which in (0, 1))
+    hum = best.amplitude(means.slopes + 2, believed)
+    return Ground(line, down, hum, chosen.bars, chosen.solved[means.slopes + 2 :], frame)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Means:
-    """Line means of the areas with the columns of every model: levels, slopes, fields, then bars.
+    """Line means of the areas with the columns of every model.
 
-    ``normal``, ``right`` and ``power`` are the weighted sums of products of columns and means.
+    Columns are each nominal level, the difference between the fields at each, then, from ``slopes`` on, the
+    two slopes and the bars. ``normal``, ``right`` and ``power`` are the weighted sums of their products;
+    ``least`` is the scale of the misfit that coding alone brings about.
     """
 
     columns: Array
     mean: Array
     weight: Array
     area: Array
-    levels: int
+    slopes: int
     normal: Array
     right: Array
     power: float
+    least: float
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -137,7 +136,27 @@ class _Fit:
     covariance: Array
     misfit: float
     scale: float
-    levels: int
+
+    def cost(self, local: float) -> float:
+        """Misfit, and what more bars, or those of the other mains, must better it by."""
+        foreign = self.bars[0] % local != 0
+        return self.misfit + _SEEN * self.scale * (len(self.bars) + foreign)
+
+    def estimate(self, which: int) -> Estimate:
+        return Estimate(float(self.solved[which]), float(np.sqrt(self.covariance[which, which])))
+
+    def amplitude(self, start: int, believed: bool) -> Estimate:
+        """Half the distance from peak to peak of the bars, the part that noise adds taken out."""
+        swings, covariance = self.solved[start:], self.covariance[start:, start:]
+        power, noise = float((swings**2).sum()), float(np.trace(covariance))
+        if not believed:
+            return Estimate(float(np.sqrt(max(power - noise, 0.0))), float(np.sqrt(noise)))
+        along = swings / np.sqrt(power)
+        sigma = float(np.sqrt(along @ covariance @ along))
+        if len(self.bars) == 1:
+            return Estimate(float(np.sqrt(max(power - noise + sigma**2, 0.0))), sigma)
+        wave = _bars(np.linspace(0.0, 1.0 / min(self.bars), 96, endpoint=False), self.bars) @ swings
+        return Estimate(float(np.ptp(wave)) / 2.0, sigma)
 
 
 def _bars(seconds: Array, frequencies: tuple[float, ...]) -> Array:
@@ -145,7 +164,7 @@ def _bars(seconds: Array, frequencies: tuple[float, ...]) -> Array:
     return np.concatenate([np.sin(phase), np.cos(phase)], -1)
 
 
-def _line_means(frame: Frame, seen: tuple[Cores, ...]) -> _Means:
+def _line_means(frame: Frame, seen: tuple[Cores, ...], coding: float) -> _Means:
     mean, weight, area, along, down, rows, nominal = [], [], [], [], [], [], []
     first = 0
     for cores in seen:
@@ -161,19 +180,18 @@ def _line_means(frame: Frame, seen: tuple[Cores, ...]) -> _Means:
         nominal.append(np.repeat(cores.nominal, tall))
     row = np.concatenate(rows)
     kinds, which = np.unique(np.concatenate(nominal), return_inverse=True)
-    columns = [
-        (which[:, None] == np.arange(len(kinds))).astype(np.float64),
-        np.concatenate(along)[:, None],
-        np.concatenate(down)[:, None],
-        ((row % 2) - 0.5)[:, None],
-    ]
+    levels = (which[:, None] == np.arange(len(kinds))).astype(np.float64)
+    columns = [levels, levels * ((row % 2) - 0.5)[:, None]]
+    columns += [np.concatenate(along)[:, None], np.concatenate(down)[:, None]]
     columns.append(_bars(line_seconds(frame, row), _every_bar()))
     design, level, mass = np.concatenate(columns, 1), np.concatenate(mean).astype(np.float64), np.concatenate(weight)
     kept = _near_model(design, level, np.sqrt(mass))
     design, level, mass = design[kept], level[kept], mass[kept]
     scaled = (design * mass[:, None]).T
     power = float((mass * level**2).sum())
-    return _Means(design, level, mass, np.concatenate(area)[kept], len(kinds), scaled @ design, scaled @ level, power)
+    least = coding**2 * float(mass.sum()) / first  # all lines of an area are off together
+    areas = np.concatenate(area)[kept]
+    return _Means(design, level, mass, areas, 2 * len(kinds), scaled @ design, scaled @ level, power, least)
 
 
 def _every_bar() -> tuple[float, ...]:
@@ -190,7 +208,7 @@ def _near_model(design: Array, level: Array, root: Array) -> Array:
 
 def _solve(means: _Means, bars: tuple[float, ...]) -> _Fit:
     """Weighted least squares of levels, slopes, fields and these bars."""
-    offset = means.levels + 3
+    offset = means.slopes + 2
     every = _every_bar()
     chosen = [*range(offset)]
     chosen += [offset + every.index(bar) for bar in bars]
@@ -200,7 +218,7 @@ def _solve(means: _Means, bars: tuple[float, ...]) -> _Fit:
     misfit = max(means.power - float(solved @ means.right[chosen]), 0.0)
     left = means.mean - means.columns[:, chosen] @ solved
     scale = misfit / max(len(left) - len(chosen), 1) * _togetherness(means, left)
-    return _Fit(bars, solved, inverse * scale, misfit, scale, means.levels)
+    return _Fit(bars, solved, inverse * max(scale, means.least), misfit, max(scale, means.least))
 
 
 def _togetherness(means: _Means, left: Array) -> float:
@@ -208,16 +226,3 @@ def _togetherness(means: _Means, left: Array) -> float:
     total = np.bincount(means.area, means.weight * left)
     power = np.bincount(means.area, (means.weight * left) ** 2)
     return max(1.0, float((total**2).sum() / max(power.sum(), 1e-12)))
-
-
-def _amplitude(fit: _Fit) -> Estimate:
-    """Half the distance from peak to peak of the bars, the part that noise adds taken out."""
-    count = len(fit.bars)
-    start = fit.levels + 3
-    swings, spread = fit.solved[start:], np.diag(fit.covariance)[start:]
-    if count == 1:
-        noise = float(spread.sum())
-        value = np.sqrt(max(float((swings**2).sum()) - noise, 0.0))
-        return Estimate(float(value), float(np.sqrt(noise / 2.0)))
-    wave = _bars(np.linspace(0.0, 1.0 / min(fit.bars), 96, endpoint=False), fit.bars) @ swings
-    return Estimate(float(np.ptp(wave)) / 2.0, float(np.sqrt(spread.sum() / 2.0)))

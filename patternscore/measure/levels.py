@@ -126,12 +126,19 @@ def _fit(stair: Steps, others: Steps) -> tuple[Transfer, Array]:
     if float(np.abs(level - seen).max()) < _FLAT:
         return fit_transfer(nominal, seen, sigma), seen
     trials = [(free, held, fit_transfer(nominal, free, sigma, held)) for free, held in _orders(level, seen)]
-    free, held, best = min(trials, key=lambda trial: trial[2].misfit)
+    # The first is the likeliest: others must explain the steps clearly better.
+    free, held, best = min(trials, key=lambda trial: trial[2].misfit * (1.0 if trial is trials[0] else 1.3))
     stuck = np.isin(nominal, best.nominal[best.held_low | best.held_high])
+    for end in (nominal.min(), nominal.max()):
+        same = nominal == end
+        apart = float(np.ptp(level[same]))
+        # Alike though the ground is not: clipped, be the steps beside it held or not.
+        stuck |= same & (apart > max(0.4, 5.0 * float(sigma[same].max())) and np.ptp(seen[same]) < 0.3 * apart)
     return best, np.where(stuck, held, free)
 
 
 def _orders(level: Array, seen: Array) -> tuple[tuple[Array, Array], ...]:
+    """Levels of free and of held steps: clipped after the slopes came in, before, or without any slopes."""
     return (level, seen), (level, level), (seen, seen)
 
 

@@ -40,7 +40,7 @@ class Noise:
     own: float
     gathering: float
 
-    def of_mean(self, count: int | Array, code_step: float) -> Array:
+    def of_mean(self, count: float | Array, code_step: float) -> Array:
         """Standard deviation of the mean of this many samples, IRE.
 
         Where noise is too little to carry levels over the code steps, the mean is off by up to half a step.

@@ -17,6 +17,7 @@ _LOWEST, _HIGHEST = 45.0, 60.0  # nominal levels up to (from) which steps may be
 _FEWEST = 5  # free steps
 _SEEN = 25.0  # gain in chi-square by which held steps are believed
 _OWN = 0.08  # IRE by which steps stray of themselves
+_DEAD = 0.3  # of the slope due, up to which steps are held for certain
 _ALIVE = 0.6  # of the slope due, from which steps still differ as they should
 
 
@@ -73,13 +74,8 @@ class Transfer:
             return Estimate(idle, self._doubt(float(step), float(own)))
         weight = 1.0 / np.hypot(self.sigma[held], 0.05) ** 2
         floor = float((weight * self.measured[held]).sum() / weight.sum())
-        free = ~(self.held_low | self.held_high)
-        if end == "black":
-            bounds = float(self.nominal[held].max()), float(self.nominal[free].min())
-        else:
-            bounds = float(self.nominal[free].max()), float(self.nominal[held].min())
-        part = np.clip((floor - self.black) / self.swing, 0.0, 1.2)
-        level = float(np.clip(100.0 * part ** (1.0 / self.gamma), *bounds))
+        part = np.clip((floor - self.black) / self.swing, 0.0, 1.0)
+        level = float(100.0 * part ** (1.0 / self.gamma))
         return Estimate(level, self._doubt(level, float(1.0 / np.sqrt(weight.sum()))))
 
     def _doubt(self, nominal: float, spread: float) -> float:
@@ -131,7 +127,7 @@ def fit_transfer(nominal: Array, measured: Array, sigma: Array, held_at: Array |
     if not solved[1] > 5.0:
         raise Unreadable("the staircase shows no contrast")
     for _ in range(2):  # a step that the curve leaves under the level of the held ones is held too
-        moved = _held_now(nominal, stuck, weight, solved, first, last)
+        moved = _held_now(nominal, (measured, stuck), weight, solved, first, last)
         if moved == (first, last):
             break
         first, last = moved
@@ -180,8 +176,9 @@ def _trials(
         shape = (1, -1, 1) if end == 0 else (1, 1, -1)
         sign = 1.0 if end == 0 else -1.0
         for at, way in ((inner, sign), (outer, -sign)):  # the held level lies between its neighbours on the curve
-            curve = black + swing * power[:, np.clip(at, 0, len(part) - 1)].reshape(len(power), *shape[1:])
-            beyond = np.maximum(way * (curve - held.reshape(shape)), 0.0)
+            at = np.clip(at, 0, len(part) - 1)
+            curve = black + swing * power[:, at].reshape(len(power), *shape[1:])
+            beyond = np.maximum(way * (curve + (stuck - level)[at].reshape(shape) - held.reshape(shape)), 0.0)
             misfit = misfit + mass.reshape(shape) * beyond**2
         misfit = misfit + apart.reshape(shape)
     best = misfit.argmin(0)
@@ -205,6 +202,9 @@ def _steps_live_below(nominal: Array, measured: Array, low: int, gamma: float, s
         return False
     reach = float(nominal[low] - nominal[0])
     due = swing / 100.0 * reach
+    inner = float(nominal[low - 1] - nominal[0])
+    if inner > 0 and float(measured[low - 1] - measured[0]) < _DEAD * swing / 100.0 * inner:
+        return False
     steep = swing * ((nominal[low] / 100.0) ** gamma - (nominal[0] / 100.0) ** gamma)
     rise = float(measured[low] - measured[nominal <= nominal[0]].mean())
     return bool(steep > 1.15 * due and rise > _ALIVE * due)
@@ -236,14 +236,23 @@ def _refine(nominal: Array, measured: Array, sigma: Array, free: slice, start: A
     return solved, np.asarray(gain @ gain.T)
 
 
-def _held_now(nominal: Array, stuck: Array, weight: Array, solved: Array, first: int, last: int) -> tuple[int, int]:
+def _held_now(
+    nominal: Array, levels: tuple[Array, Array], weight: Array, solved: Array, first: int, last: int
+) -> tuple[int, int]:
     """Free steps from first to last, those left out that the curve puts beyond the level of the held ones."""
-    curve = solved[0] + solved[1] * (nominal / 100.0) ** solved[2]
+    measured, stuck = levels
+    due = solved[0] + solved[1] * (nominal / 100.0) ** solved[2] + stuck - measured
     count = len(nominal)
     if first:
         floor = np.average(stuck[:first], weights=weight[:first])
-        first = int(np.count_nonzero((curve < floor) & (nominal <= _LOWEST))) or first
+        first = _last_true((due < floor) & (nominal <= _LOWEST)) + 1 or first
     if last < count:
         ceiling = np.average(stuck[last:], weights=weight[last:])
-        last = count - (int(np.count_nonzero((curve > ceiling) & (nominal >= _HIGHEST))) or count - last)
+        last = count - (_last_true(((due > ceiling) & (nominal >= _HIGHEST))[::-1]) + 1 or count - last)
     return (first, last) if len(np.unique(nominal[first:last])) >= _FEWEST else (0, count)
+
+
+def _last_true(flags: Array) -> int:
+    """Index of the last one; -1 where there is none."""
+    at = np.nonzero(flags)[0]
+    return int(at[-1]) if len(at) else -1
