@@ -35,6 +35,8 @@ class Alignment:
         rms shift of the rows beyond what noise explains, samples.
     blur : float
         Variance by which aligning has narrowed the profile (to be added back), samples squared.
+    moved : float
+        Largest move that was made, samples.
     """
 
     noise: float
@@ -43,6 +45,7 @@ class Alignment:
     jitter: float
     jitter_sigma: float
     blur: float
+    moved: float
 
 
 def run_basis(rows: npt.NDArray[Any], degree: int, parity: bool) -> Array:
@@ -84,12 +87,25 @@ def settle(strip: Strip) -> None:
         if np.min(strip.step) < LOWEST:
             raise Unreadable("there is no step to be seen where the plan has an edge")
         if round_ == 0:
-            _whole_rows(strip, after - before)
+            keep = _whole_rows(strip, after - before)
+            before, after = before[:, keep], after[:, keep]
+        _level_rows(strip, (after + before) / 2, side)
         moved = _by_area(strip)
         strip.position = strip.position + moved
         if np.abs(moved).max() < CLOSE:
             break
     _inside(strip)
+
+
+def _level_rows(strip: Strip, plateaus: Array, side: int) -> None:
+    """Take differences of level between the rows (hum, tilt) off the windows, so far as they stand out of noise."""
+    off = plateaus.mean(axis=0)
+    off = off - off.mean()
+    outer = strip.levels[..., :side]
+    noise = float(np.mean((outer[..., 1:] - outer[..., :-1]) ** 2)) / (4.0 * side * len(plateaus))
+    power = float(np.mean(off**2))
+    if power > 2.0 * noise:
+        strip.levels -= (off * (1.0 - noise / power)).astype(np.float32)[:, None]
 
 
 def _by_area(strip: Strip) -> Array:
@@ -112,7 +128,7 @@ def _levels(before: Array, after: Array) -> tuple[Array, Array]:
     return middle, step
 
 
-def _whole_rows(strip: Strip, rise: Array) -> None:
+def _whole_rows(strip: Strip, rise: Array) -> npt.NDArray[np.bool_]:
     """Keep the rows that have the whole step: near its ends an edge fades into what lies beyond."""
     part = np.mean(rise * (strip.sign / strip.step)[:, None], axis=0)
     off = np.abs(part / _median(part) - 1.0)
@@ -121,6 +137,7 @@ def _whole_rows(strip: Strip, rise: Array) -> None:
         raise Unreadable("the step differs too much along the edge")
     if not keep.all():
         strip.keep(keep)
+    return np.asarray(keep)
 
 
 def _median(values: Array) -> float:
@@ -181,7 +198,8 @@ def refine(strip: Strip, model: Array, *, jitter: bool) -> Alignment:
     free = 1.0 - basis.shape[1] / len(strip.rows)
     excess = max(float(np.mean(own**2)) / free - float(row_variance.mean()), 0.0)
     shrink = excess / (excess + row_variance) if jitter else np.zeros_like(row_variance)
-    strip.position = strip.position + smooth + (own * shrink - strip.shifts)
+    change = smooth + (own * shrink - strip.shifts)
+    strip.position = strip.position + change
     strip.shifts = own * shrink
     return Alignment(
         noise=float(np.sqrt(variance)),
@@ -190,6 +208,7 @@ def refine(strip: Strip, model: Array, *, jitter: bool) -> Alignment:
         jitter=float(np.sqrt(excess)),
         jitter_sigma=_jitter_sigma(excess, float(row_variance.mean()), len(own)),
         blur=float(np.mean(shrink * row_variance)),
+        moved=float(np.abs(change).max()),
     )
 
 

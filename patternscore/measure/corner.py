@@ -9,7 +9,7 @@ import numpy.typing as npt
 
 from patternscore.errors import Unreadable
 from patternscore.frame import Frame
-from patternscore.measure.align import settle
+from patternscore.measure.align import refine, settle
 from patternscore.measure.design import lay_out
 from patternscore.measure.family import relative
 from patternscore.measure.fitedge import FittedEdge
@@ -21,6 +21,8 @@ Array = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
 # Sizes of the spot that are tried; see ``relative``. Between them the profiles are interpolated.
 SPOTS = np.array([-0.3, -0.2, -0.1, 0.0, 0.1, 0.2, 0.35, 0.55, 0.8, 1.2, 1.8, 2.7, 4.0, 6.0])
+
+SHAKY = 0.05  # samples of jitter from which lines are brought into step one by one
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -48,8 +50,8 @@ def fit_corners(frame: Frame, blocks: dict[str, list[Run]], centre: FittedEdge) 
 
     Notes
     -----
-    Lines are not brought into step one by one here, for that few edges: what their jitter, known from the
-    centre, does to the profile is part of the model.
+    Lines are brought into step one by one only where there is much jitter at the centre; what a little does to
+    the profile is part of the model.
     """
     strips: dict[str, Strip] = {}
     for place, runs in blocks.items():
@@ -67,10 +69,16 @@ def fit_corners(frame: Frame, blocks: dict[str, list[Run]], centre: FittedEdge) 
     coding, gain = coding_of(frame), centre.response.gain
     shelf: _Shelf | None = None
     found = {}
+    shaky = centre.alignment.jitter > SHAKY
     for place, strip in strips.items():
         pile = pile_up([strip], coding)
         if shelf is None:
-            shelf = _shelf(strip, pile, gain, centre.alignment.jitter)
+            shelf = _shelf(strip, pile, gain, 0.0 if shaky else centre.alignment.jitter)
+        if shaky:
+            model = shelf.profiles[[_nearest(pile, shelf)] * len(strip.position)]
+            for _ in range(2):
+                refine(strip, model, jitter=True)
+            pile = pile_up([strip], coding)
         found[place] = _fit(pile, shelf, gain)
     return found
 
@@ -92,11 +100,7 @@ def _shelf(strip: Strip, pile: Pile, gain: Complex, jitter: float) -> _Shelf:
 def _fit(pile: Pile, shelf: _Shelf, gain: Complex) -> Response:
     """Find the nearest size, then one step of least squares on size, delay, step and offset."""
     profile, sound = pile.whole()
-    held = np.where(sound, profile, 0.0)
-    target = np.stack([np.full(len(SPOTS), held.sum()), shelf.profiles @ held, shelf.rates @ held], axis=1)
-    fitted = np.linalg.solve(shelf.gram, target[..., None])[..., 0]
-    best = int(np.argmax(np.einsum("ka,ka->k", fitted, target)))
-    spot = float(SPOTS[best])
+    spot = float(SPOTS[_nearest(pile, shelf)])
     weight = np.sqrt(np.where(sound, 1.0 / np.maximum((1.0 / np.maximum(pile.count, 1.0)).mean(axis=0), 1e-9), 0.0))
     weight *= np.sqrt(len(pile.count)) / max(pile.noise, 1e-3)
     for _ in range(3):
@@ -120,6 +124,15 @@ def _fit(pile: Pile, shelf: _Shelf, gain: Complex) -> Response:
         model=model[None],
         chi2=chi2,
     )
+
+
+def _nearest(pile: Pile, shelf: _Shelf) -> int:
+    """Size on the shelf that fits best with any delay, step and offset."""
+    profile, sound = pile.whole()
+    held = np.where(sound, profile, 0.0)
+    target = np.stack([np.full(len(SPOTS), held.sum()), shelf.profiles @ held, shelf.rates @ held], axis=1)
+    fitted = np.linalg.solve(shelf.gram, target[..., None])[..., 0]
+    return int(np.argmax(np.einsum("ka,ka->k", fitted, target)))
 
 
 def _between(shelf: _Shelf, spot: float) -> tuple[Array, Array, Array]:

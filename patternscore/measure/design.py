@@ -303,8 +303,11 @@ def _nuisance(layout: Layout, pile: Pile, code: float) -> tuple[Array, Array]:
     near, coarse, share = layout.near, layout.coarse, layout.share
     edges, flat = len(share), pile.flat.astype(np.float64)
     columns = []
-    for side in (pile.times < 0, pile.times > 0):
-        held = flat * side
+    rising = layout.signs[:, None] > 0
+    before = (pile.times < 0)[None, :]
+    for dark in (True, False):
+        # The dark level lies before a rising edge and, as the profile of a falling one is reversed, after that.
+        held = flat * np.where(rising == dark, before, ~before) * np.where(rising, 1.0, -1.0)
         columns.append(np.concatenate([(held[:, near] * share).sum(axis=0), held[:, coarse].ravel()]))
     own = np.zeros((edges, len(near) + edges * len(coarse)))
     own[:, : len(near)] = share

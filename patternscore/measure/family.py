@@ -16,7 +16,7 @@ Complex = npt.NDArray[np.complex128]
 
 # theta: 0 Gaussian, 1 and 2 denominator, 3 numerator, 4 delay (samples), 5 band limit, 6 its width (cycles/sample)
 PRIOR = np.array([2.0, 2.0, 2.0, 2.0, 2.0, 0.1, 0.06])  # how far from the start each may well go
-LOWEST = np.array([0.0, 0.0, 0.0, -4.0, -20.0, 0.04, 0.008])
+LOWEST = np.array([0.0, 0.0, 0.0, -4.0, -20.0, 0.04, 0.003])
 HIGHEST = np.array([20.0, 20.0, 20.0, 20.0, 20.0, 2.0, 0.5])
 GRABBER = (0.455, 0.1)  # a usual anti-alias filter: its middle and width, cycles per sample
 OPEN = (2.0, 0.1)  # none to speak of
@@ -194,7 +194,7 @@ def _along() -> list[Start]:
         for shape in shapes
         for limit in (GRABBER, OPEN)
     ]
-    found += [_member(0.5, 0.0, 0.0, 0.0, 0.0, (middle, 0.03)) for middle in np.geomspace(0.06, 0.5, 26)]
+    found += [_member(0.5, 0.0, 0.0, 0.0, 0.0, (middle, 0.02)) for middle in np.geomspace(0.06, 0.5, 50)]
     found += [_member(0.5, 0.0, 0.0, 0.0, 0.0, (middle, 0.3 * middle)) for middle in np.geomspace(0.06, 0.5, 18)]
     return found
 

@@ -19,6 +19,7 @@ from patternscore.measure.stepbasis import BINS, edge_of
 Array = npt.NDArray[np.float64]
 ROUNDING_LEFT = 0.05  # share of the variance of rounding that stays when it has been taken out by a model
 MISFIT = 2.5  # chi2 per degree of freedom above which another round is worth its time
+FAR = 0.25  # samples of a move after which another is made: the step was no longer a small one
 ROUNDS, ROUNDS_ACROSS = 3, 2
 
 
@@ -127,7 +128,11 @@ def _refine(strips: list[Strip], model: Array, *, jitter: bool) -> Alignment:
     found, done = [], 0
     for strip in strips:
         count = len(strip.position)
-        found.append(refine(strip, model[done : done + count], jitter=jitter))
+        part = model[done : done + count]
+        alignment = refine(strip, part, jitter=jitter)
+        if alignment.moved > FAR:
+            alignment = refine(strip, part, jitter=jitter)
+        found.append(alignment)
         done += count
     return found[0]
 

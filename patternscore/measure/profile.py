@@ -22,6 +22,7 @@ SHORTEST = 5.0  # and at least
 MARGIN = 1.5  # samples kept off what lies beyond the clear part
 END = {"h": 4, "v": 10}  # rows kept off the ends of an edge: spot and error of location, smear along the line
 FEWEST = 12  # lines across an edge
+STILL = 0.1  # codes per sample below which a profile is a plateau
 LOWEST = 6.0  # IRE of step
 
 
@@ -201,7 +202,7 @@ class Pile:
     mean : (edges, bins) float64
         Their mean, fraction of the step about its middle.
     flat : (edges, bins) bool
-        Bins whose samples show hardly more than one code, so that their mean may be off by part of it.
+        Bins of a plateau whose samples show hardly more than one code, so that their mean may be off by part of it.
     clipped : (edges, bins) bool
         Bins that hold samples at the end of the coding range.
     noise : float
@@ -259,9 +260,11 @@ def _pile_strip(sums: Array, strip: Strip, coding: Coding, model: Array | None, 
     if low <= coding.limits[0] or high >= coding.limits[1]:
         ends = (levels <= coding.limits[0]) | (levels >= coding.limits[1])
     if model is not None and rounding and coding.coarse:
-        rate = slope_of(model)
-        expected = strip.unsigned(table(model)[index] + table(rate)[index] * off)
-        levels = levels - coding.rounding(expected)
+        rate = table(slope_of(model))
+        expected = strip.unsigned(table(model)[index] + rate[index] * off)
+        # On a plateau the model knows no better than the code what is lost below it.
+        moving = np.abs(rate) > np.float32(STILL * coding.step / strip.step.mean())
+        levels = levels - coding.rounding(expected) * moving[index]
     value = strip.signed(levels)
     terms: list[Any] = [None, value, None, None, value * value, ends]
     if model is not None:
@@ -286,7 +289,10 @@ def _pile(first: int, sums: Array, model: Array | None, code: float) -> Pile:
         # A bin holds the mean of a bent curve about its centre, not its value there.
         rate = slope_of(model)
         mean -= share * (off * rate + square * slope_of(rate) / 2.0)
-    return Pile(first, count, mean, variance < (0.25 * code) ** 2, clipped > 0, float(noise))
+    flat = variance < (0.25 * code) ** 2
+    if model is not None:
+        flat &= np.abs(rate) < STILL * code
+    return Pile(first, count, mean, flat, clipped > 0, float(noise))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
