@@ -33,15 +33,16 @@ class Fold:
     ----------
     length : Estimate
         Samples or lines; 0 where the scan does not fold.
-    turning, ratio : float or None
-        Frame coordinate of the turning point, and backward over forward speed.
+    turning, ratio : float
+        Coordinate of the turning point from that edge of the frame, and backward over forward speed; 0 where
+        the scan does not fold.
     misfit : (float, float)
         rms departure, of the bars' contrast, from a scan that does not fold and from the one believed.
     """
 
     length: Estimate
-    turning: float | None = None
-    ratio: float | None = None
+    turning: float = 0.0
+    ratio: float = 0.0
     misfit: tuple[float, float] = (0.0, 0.0)
 
 
@@ -62,8 +63,13 @@ def suspect(view: View) -> float:
     return float(np.sqrt(run.max()))
 
 
-def find_fold(view: View, plain: float, edge_sigma: float) -> Fold:
-    """Decide for or against a fold and measure it.
+def no_fold(plain: float, edge_sigma: float) -> Fold:
+    """Give the absence of a fold; ``edge_sigma`` is how well a bar edge is known, samples or lines."""
+    return Fold(Estimate(0.0, max(edge_sigma, 1e-3)), misfit=(plain, plain))
+
+
+def find_fold(view: View, plain: float, *, final: bool = True) -> Fold:
+    """Measure the fold of an edge that is under suspicion.
 
     Parameters
     ----------
@@ -71,26 +77,18 @@ def find_fold(view: View, plain: float, edge_sigma: float) -> Fold:
         The edge of the picture.
     plain : float
         What ``suspect`` found.
-    edge_sigma : float
-        Standard deviation of a bar edge, samples or lines.
-
-    Returns
-    -------
-    Fold
-        Of length 0 where the scan does not fold.
+    final : bool
+        Whether to judge it, too.
 
     Raises
     ------
     Unreadable
         If something stands before the forward code that no fold explains.
     """
-    none = Fold(Estimate(0.0, max(edge_sigma, 1e-3)), misfit=(plain, plain))
-    if plain < PLAIN:
-        return none
     fit = fit_fold(_strip(view))
-    if fit.misfit < min(BETTER * plain, MISFIT) and fit.length.value > LEAST * view.bar:
-        return Fold(fit.length, fit.turning, fit.ratio, (plain, fit.misfit))
-    raise Unreadable("what stands before the forward code is neither black nor folded picture")
+    if final and (fit.misfit > min(BETTER * plain, MISFIT) or fit.length.value < LEAST * view.bar):
+        raise Unreadable("what stands before the forward code is neither black nor folded picture")
+    return Fold(fit.length, fit.turning, fit.ratio, (plain, fit.misfit))
 
 
 def _strip(view: View) -> View:

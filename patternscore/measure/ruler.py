@@ -44,10 +44,10 @@ class Strip:
         Middle of the band, picture fraction across the ruler's axis.
     covered : (float, float)
         Picture fractions across between which its rows were taken.
-    rows : (depth, n) float32
-        The band's rows, IRE.
+    tilt : float
+        By how much the bars lean within the band, samples, or the band runs aslant.
     mean : (n,) float64
-        Their mean.
+        Mean of the rows, IRE.
     scatter : (n,) float64
         Half the difference of the means of two halves of the rows: what noise does to ``mean``.
     seen : (n,) bool
@@ -60,7 +60,7 @@ class Strip:
     axis: Axis
     across: float
     covered: tuple[float, float]
-    rows: npt.NDArray[np.float32]
+    tilt: float
     mean: Array
     scatter: Array
     seen: npt.NDArray[np.bool_]
@@ -125,7 +125,25 @@ def axis_of(ruler: Ruler) -> Axis:
     return "h" if ruler.side in ("top", "bottom") else "v"
 
 
-def straighten(frame: Frame, warp: Warp, ruler: Ruler) -> Strip:
+@dataclass(frozen=True, slots=True)
+class Bend:
+    """A folded stretch: from ``turning`` to the near or far end of the frame the scan runs back.
+
+    ``ratio`` is the backward over the forward speed; 0 leaves it open and takes the band at its turning point.
+    """
+
+    turning: float
+    ratio: float
+    far: bool
+
+    def forward(self, index: Array) -> tuple[Array, Array]:
+        """Forward coordinate that shows the same place, and the backward slowness (0 where forward)."""
+        back = index > self.turning if self.far else index < self.turning
+        shown = np.where(back, self.turning - self.ratio * (index - self.turning), index)
+        return shown, np.where(back, -1.0 / self.ratio if self.ratio > 0 else 0.0, 1.0)
+
+
+def straighten(frame: Frame, warp: Warp, ruler: Ruler, bend: Bend | None = None) -> Strip:
     """Follow a ruler's band through the frame and lay it straight.
 
     Parameters
@@ -136,6 +154,8 @@ def straighten(frame: Frame, warp: Warp, ruler: Ruler) -> Strip:
         Picture fractions to frame coordinates, good to a sample or so.
     ruler : Ruler
         The ruler.
+    bend : Bend, optional
+        A fold, where the band leans and bows the other way.
 
     Raises
     ------
@@ -155,8 +175,9 @@ def straighten(frame: Frame, warp: Warp, ruler: Ruler) -> Strip:
     guide = found[:28, along]
     if np.any(np.diff(guide) <= 0):
         raise Unreadable(f"the {ruler.side} ruler could not be followed")
-    centre = np.interp(index, guide, found[:28, 1 - along])
-    lean = np.interp(index, guide, shear[:28])
+    followed, slow = bend.forward(index) if bend is not None else (index, np.ones(1))
+    centre = np.interp(followed, guide, found[:28, 1 - along])
+    lean = np.interp(followed, guide, shear[:28]) * slow
     depth = abs(ruler.band[1] - ruler.band[0]) * float(np.mean(slopes[:28, 1 - along, 1 - along]))
     half = max(int(depth * USED / 2), 2)
     steps = np.arange(-half, half + 1, dtype=np.float64)[:, None]
@@ -172,7 +193,8 @@ def straighten(frame: Frame, warp: Warp, ruler: Ruler) -> Strip:
     taken = steps[used.mean(1) > 0.5, 0] if used.any() else steps[:, 0]
     wide = (ruler.band[1] - ruler.band[0]) / depth
     covered = (middle + (taken.min() - 0.5) * wide, middle + (taken.max() + 0.5) * wide) if taken.size else ruler.band
-    return Strip(ruler, axis, middle, covered, rows, mean, scatter, seen, found[28:, along])
+    tilt = max(half * float(np.abs(lean).max()), 0.02 * float(np.ptp(centre)))
+    return Strip(ruler, axis, middle, covered, tilt, mean, scatter, seen, found[28:, along])
 
 
 def _alike(rows: npt.NDArray[np.float32], inside: npt.NDArray[np.bool_]) -> npt.NDArray[np.bool_]:

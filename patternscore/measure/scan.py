@@ -12,9 +12,9 @@ import numpy.typing as npt
 from patternscore.errors import Unreadable
 from patternscore.frame import Frame
 from patternscore.located import Located
-from patternscore.measure.fold import PLAIN, Fold, find_fold, suspect
-from patternscore.measure.foldview import view_edge
-from patternscore.measure.ruler import Axis, Bars, axis_of, read_bars, sharpen, straighten
+from patternscore.measure.fold import PLAIN, Fold, find_fold, no_fold, suspect
+from patternscore.measure.foldview import FAR, View, view_edge
+from patternscore.measure.ruler import Axis, Bars, Bend, axis_of, read_bars, sharpen, straighten
 from patternscore.measure.scanmap import ScanMap, crush, fit_scan, linearity
 from patternscore.measure.stepshape import StepShape
 from patternscore.plan import Side
@@ -23,6 +23,7 @@ from patternscore.reading import Estimate, Findings
 SIDES: dict[Axis, tuple[Side, Side]] = {"h": ("left", "right"), "v": ("top", "bottom")}
 SIZE = {"h": "width", "v": "height"}
 HIDDEN = 1.0 / 80.0  # picture fraction that may lie outside the frame before a reading there is given up
+TILTED = 0.2  # samples that the bars of a band may lean before a fold is straightened anew
 UNREAD = 0.045  # picture fraction between the edge and the first bar edge read
 
 
@@ -105,8 +106,8 @@ def _read_axis(findings: Findings, frame: Frame, located: Located, axis: Axis, s
     starts = [max(nominal[0], -0.5), min(nominal[1], last)]
     for end, side in enumerate(SIDES[axis]):
         fold = folds.get(side)
-        if fold is not None and fold.turning is not None:
-            starts[end] = fold.turning
+        if fold is not None and fold.length.value > 0:
+            starts[end] = last - 0.5 - fold.turning if end else fold.turning
     span = (starts[0], starts[1])
     findings.traces[f"scan_{axis}"] = Scan(scan, tuple(bars), span, nominal, folds)
     _speeds(findings, scan, span)
@@ -140,13 +141,15 @@ def _folds(
         bars = [replace(one, shape=shape) for one in bars]
     per_unit = frame.sample_rate if axis == "h" else 1.0
     folds: dict[str, Fold] = {}
-    for end, side in enumerate(SIDES[axis]):
+    for side, start in zip(SIDES[axis], nominal, strict=True):
         try:
-            view = view_edge(located.plan, bars, side, nominal[end], scan.late)
+            view = view_edge(located.plan, bars, side, start, scan.late)
             plain = suspect(view)
-            if plain > PLAIN and shape is None:
-                view = view_edge(located.plan, sharpen(bars), side, nominal[end], scan.late)
-            fold = find_fold(view, plain, scan.edge_sigma)
+            if plain < PLAIN:
+                fold = no_fold(plain, scan.edge_sigma)
+            else:
+                sharp = bars if shape is not None else sharpen(bars)
+                fold = _look_closely(frame, located, sharp, view, plain, Edge(side, start, scan.late))
         except Unreadable as reason:
             findings.miss(reason.reason, f"fold_{side}")
             continue
@@ -154,6 +157,32 @@ def _folds(
         length = Estimate(fold.length.value / per_unit, fold.length.sigma / per_unit)
         findings.add(f"fold_{side}", "us" if axis == "h" else "lines", length, f"{side} edge")
     return folds
+
+
+@dataclass(frozen=True, slots=True)
+class Edge:
+    """Edge of the picture, nominal start of the active part there, and how much later rising edges come."""
+
+    side: Side
+    start: float
+    late: float
+
+
+def _look_closely(frame: Frame, located: Located, bars: list[Bars], view: View, plain: float, edge: Edge) -> Fold:
+    """Fit a fold; where the bands lean, straighten them anew for a scan that runs backwards there."""
+    tilted = max(one.strip.tilt for one in bars) > TILTED
+    turning, ratio = view.certified, 0.0
+    for _ in range(3 if tilted else 1):
+        if tilted:
+            far = edge.side in FAR
+            length = bars[0].strip.mean.size - 1
+            bend = Bend(length - turning if far else turning, ratio, far)
+            strips = [straighten(frame, located.warp, one.strip.ruler, bend) for one in bars]
+            bars = [replace(one, strip=strip) for one, strip in zip(bars, strips, strict=True)]
+        closer = view_edge(located.plan, bars, edge.side, edge.start, edge.late)
+        fold = find_fold(closer, plain, final=not tilted or ratio > 0)
+        turning, ratio = fold.turning, fold.ratio
+    return fold
 
 
 def _ends(scan: ScanMap, span: tuple[float, float]) -> tuple[str | None, str | None]:
