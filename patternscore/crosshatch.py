@@ -182,7 +182,7 @@ def measure_crossings(
         start = _coarse(lines, 0.05 * cell[axis]) if wide else np.zeros(len(points))
         rows = arms[:, axis].sum(1) * (clear[1] - clear[0] + 1)
         shifts[:, axis], sigma[:, axis], height = _refine(
-            lines, start, noise / np.sqrt(rows), thick[axis], 2 if wide else 3
+            lines, start, noise / np.sqrt(rows), thick[axis], 1 if wide else 2
         )
         good &= (height > 0.4 * np.median(height)) & (np.abs(shifts[:, axis]) < reach[axis] - 2)
     # The two lines lean a little: go from the predicted crossing along both to where they meet.

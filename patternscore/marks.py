@@ -47,14 +47,16 @@ def find_saddles(luma: Array, radius: float) -> Saddles:
     import cv2
 
     rows, samples = luma.shape
-    half = cv2.resize(luma, (samples // 2, rows // 2), interpolation=cv2.INTER_AREA)
-    smooth = cv2.GaussianBlur(half, (0, 0), 0.22 * radius)
+    less = max(int(radius / 4.0), 1)  # a mark of four samples' radius is large enough to find
+    wide, tall = samples // less, rows // less
+    small = cv2.resize(luma[: tall * less, : wide * less], (wide, tall), interpolation=cv2.INTER_AREA)
+    smooth = cv2.GaussianBlur(small, (0, 0), 0.44 * radius / less)
     mixed = cv2.Sobel(smooth, cv2.CV_32F, 1, 1, ksize=3)
     bend_x = cv2.Sobel(smooth, cv2.CV_32F, 2, 0, ksize=3)
     bend_y = cv2.Sobel(smooth, cv2.CV_32F, 0, 2, ksize=3)
     # A quadrant mark bends only along its diagonals; ridges, corners and blobs bend along x or y too.
     strength = np.abs(mixed) - 0.25 * np.abs(bend_x + bend_y) - 0.15 * np.abs(bend_x - bend_y)
-    size = 2 * max(int(0.3 * radius), 2) + 1
+    size = 2 * max(int(0.6 * radius / less), 2) + 1
     peak = (strength >= cv2.dilate(strength, np.ones((size, size), np.uint8))) & (strength > 0)
     y, x = np.nonzero(peak)
     hands = np.where(mixed[y, x] > 0, 1, -1)
@@ -64,7 +66,8 @@ def find_saddles(luma: Array, radius: float) -> Saddles:
     x, y, hands = x[inside], y[inside], hands[inside]
     dx = _vertex(strength[y, x - 1], strength[y, x], strength[y, x + 1])
     dy = _vertex(strength[y - 1, x], strength[y, x], strength[y + 1, x])
-    return Saddles(np.stack([2 * (x + dx) + 0.5, 2 * (y + dy) + 0.5], 1), hands)
+    middle = (less - 1) / 2
+    return Saddles(np.stack([less * (x + dx) + middle, less * (y + dy) + middle], 1), hands)
 
 
 def _strongest(strength: Array, which: Array) -> Array:

@@ -58,11 +58,14 @@ def read_grid(frame: Frame, located: Located) -> Findings:
     try:
         crossings = _enough(located.crossings)
         model = fit_geometry(crossings, frame.raster)
-        for key, unit, estimate in model.readings():
+        readings = model.readings()
+        for key, unit, estimate in readings:
             findings.add(key, unit, estimate, "crosshatch")
         error, ideal = position_error(crossings, frame.raster)
         findings.add("position_error", "% of PH", error, "crosshatch")
-        findings.traces["grid"] = GridTrace(crossings.index, ideal, crossings.found, model.left_over, model.parts())
+        findings.traces["grid"] = GridTrace(
+            crossings.index, ideal, crossings.found, model.left_over, model.parts(readings)
+        )
     except Unreadable as why:
         findings.miss(why.reason, *KEYS)
     return findings
@@ -122,8 +125,8 @@ class Axis:
         return np.asarray(np.stack([seen**k for k in _SWEEP], -1) @ self.sweep)
 
     def _rate(self, seen: Array) -> Array:
-        slope = 1.0 + np.stack([k * seen ** (k - 1) for k in _SWEEP], -1) @ self.sweep
-        return np.asarray(np.maximum(slope, 0.2))
+        slope: Array = 1.0 + np.stack([k * seen ** (k - 1) for k in _SWEEP], -1) @ self.sweep
+        return np.asarray(np.clip(slope, 0.2, None))
 
     def share(self, weights: Array, across: float = 1.0 / 3.0) -> Estimate:
         """A combination of distortion terms over half the size of the picture.
@@ -133,7 +136,7 @@ class Axis:
         """
         half = float(self.terms[1] + self.terms[5] * across)
         inner = self.covariance[: len(_TERMS), : len(_TERMS)]
-        sigma = float(np.sqrt(weights @ inner @ weights))
+        sigma = float(weights @ inner @ weights) ** 0.5
         return Estimate(float(weights @ self.terms) / half, sigma / abs(half))
 
     def spread(self, gradient: Array) -> float:
@@ -228,9 +231,9 @@ class Geometry:
             ]
         return found
 
-    def parts(self) -> dict[str, tuple[float, str]]:
+    def parts(self, readings: list[tuple[str, str, Estimate]]) -> dict[str, tuple[float, str]]:
         """All that a person can adjust, by name, with its unit."""
-        both = (*self.sweep_readings(), *self.readings())
+        both = (*self.sweep_readings(), *readings)
         return {key: (estimate.value, unit) for key, unit, estimate in both}
 
 
