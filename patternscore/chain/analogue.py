@@ -8,7 +8,7 @@ import numpy as np
 import numpy.typing as npt
 import scipy.fft
 
-from patternscore.chain.scene import pixel_loss, scan
+from patternscore.chain.scene import scan
 from patternscore.chain.settings import Chain
 from patternscore.standard import Raster
 
@@ -58,8 +58,7 @@ def line_spectra(chain: Chain, picture: Lines) -> Spectra:
     clipped = chain.black_clip is not None or chain.white_clip is not None
     if not clipped:  # all is linear: what the grabber's filter stops need not be reckoned
         spectra, frequency = spectra[:, :kept], frequency[:kept]
-    stages = chain.electrical()(frequency) / _restorable(chain, picture.shape[1], frequency)
-    spectra = spectra * stages.astype(np.complex64)
+    spectra = spectra * chain.electrical()(frequency).astype(np.complex64)
     _add_tilt(chain, spectra, times, lines)
     spectra[:, 0] += count * _line_offsets(chain)
     if clipped:
@@ -89,11 +88,6 @@ def _passed(chain: Chain, frequency: Axis) -> int:
         return len(frequency)
     passing = np.nonzero(np.abs(chain.band_limit(frequency)) > _NOTHING)[0]
     return max(int(passing[-1]) + 1, line_samples(chain) // 2 + 1)
-
-
-def _restorable(chain: Chain, width: int, frequency: Axis) -> Axis:
-    """Loss by the picture's pixels, made good where the sampler can see it."""
-    return np.where(frequency < 2.0 * chain.sample_rate, pixel_loss(chain, width, frequency), 1.0)
 
 
 def _add_tilt(chain: Chain, spectra: Spectra, times: Axis, lines: Axis) -> None:

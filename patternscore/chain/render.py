@@ -26,8 +26,8 @@ def grab(chain: Chain, picture: npt.NDArray[Any] | None = None, seed: int = 0) -
     chain : Chain
         Settings.
     picture : (h, w) array, optional
-        Levels in IRE of exactly the active picture, any size; the package's chart where left out. Along the
-        line the loss by its pixels is made good; down the field a spot of less than half a row cannot be had.
+        Levels in IRE of exactly the active picture, any size; the package's chart where left out. What its
+        pixels lose is made good: at 6 MHz within 0.1 % from 2880 columns up, within 3 % at 3 MHz with 720.
     seed : int
         Noise, jitter, wander and bounce follow from it; the same seed gives the same frame.
 
