@@ -230,4 +230,4 @@ def _noise(rest: Any, moved: Array, power: Array) -> float:
 def _jitter_sigma(excess: float, row_variance: float, count: int) -> float:
     """Scatter of the rms jitter over grabs: that of a variance from ``count`` rows, carried to its root."""
     of_variance = (excess + row_variance) * np.sqrt(2.0 / count)
-    return float(min(of_variance / (2.0 * np.sqrt(max(excess, 1e-12))), np.sqrt(of_variance)))
+    return float(min(of_variance / (2.0 * np.sqrt(max(excess, 1e-12))), 0.5 * np.sqrt(of_variance)))

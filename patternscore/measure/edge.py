@@ -156,7 +156,8 @@ def _read_along(
     _take(findings, "rise_time", "ns", "centre", spread.rise_time)
     _take(findings, "overshoot", "%", "centre", spread.overshoot)
     _take(findings, "preshoot", "%", "centre", spread.preshoot)
-    _take(findings, "ringing", "MHz", "centre", spread.ringing)
+    poles = fitted.poles and Estimate(fitted.poles.value * rate, fitted.poles.sigma * rate)
+    _take(findings, "ringing", "MHz", "centre", lambda: spread.ringing(poles))
     ns = 1e3 / rate
     alignment = fitted.alignment
     findings.add("jitter", "ns", Estimate(alignment.jitter * ns, alignment.jitter_sigma * ns), "centre")

@@ -13,6 +13,7 @@ from patternscore.measure.stepbasis import BINS, edge_of, step_basis
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[np.float64]
+BORNE_OUT = 0.35  # part of a frequency within which extrema bear out a pole pair
 SEEN = 3.0  # sigmas over which something counts as there
 
 
@@ -203,8 +204,14 @@ class EdgeSpread:
         beyond = sense * (peak - (1.0 if sense > 0 else 0.0))
         return Estimate(100.0 * max(float(beyond), 0.0), 100.0 * self._sigma(self._slopes([k])[0]))
 
-    def ringing(self) -> Estimate:
+    def ringing(self, poles: Estimate | None = None) -> Estimate:
         """Frequency in MHz of the damped oscillation after the edge.
+
+        Parameters
+        ----------
+        poles : Estimate, optional
+            Frequency of the pole pair of the fitted family, MHz. It is taken where the extrema bear it out, for
+            these are also moved by what else is in the response, such as a sharp band limit.
 
         Raises
         ------
@@ -227,7 +234,10 @@ class EdgeSpread:
         last = len(seen) - 1
         span = seen[last][0] - seen[0][0]
         sigma = float(np.hypot(seen[0][1], seen[last][1]))
-        return Estimate(last / (2.0 * span), last / (2.0 * span) * sigma / span)
+        found = Estimate(last / (2.0 * span), last / (2.0 * span) * sigma / span)
+        if poles is not None and abs(found.value / poles.value - 1.0) < BORNE_OUT:
+            return poles
+        return found
 
     def _turns(self) -> list[int]:
         """Extrema after the edge, the overshoot first, alternately above and below the step."""

@@ -19,6 +19,7 @@ PRIOR = np.array([2.0, 2.0, 2.0, 2.0, 2.0, 0.1, 0.06])  # how far from the start
 LOWEST = np.array([0.0, 0.0, 0.0, -4.0, -20.0, 0.04, 0.003])
 HIGHEST = np.array([20.0, 20.0, 20.0, 20.0, 20.0, 2.0, 0.5])
 GRABBER = (0.455, 0.1)  # a usual anti-alias filter: its middle and width, cycles per sample
+DAMPED = 0.85  # damping ratio from which a pole pair is not seen to ring
 OPEN = (2.0, 0.1)  # none to speak of
 
 
@@ -61,6 +62,21 @@ def around(start: Start, free: tuple[int, ...] = tuple(range(7))) -> Family:
         return gain, slopes[moving]
 
     return Family(shape, start.theta[moving], PRIOR[moving], LOWEST[moving], HIGHEST[moving])
+
+
+def pole_frequency(theta: Array, scale: float) -> tuple[float, Array] | None:
+    """Frequency at which the pole pair of a member swings, cycles per sample, and its slopes in ``theta``.
+
+    None where the poles are real, or so well damped that nothing is seen to swing.
+    """
+    a1, a2 = float(theta[1]), float(theta[2])
+    inside = 4.0 * a2 - a1**2
+    if a2 <= 0.0 or inside <= 0.0 or a1 > 2.0 * DAMPED * np.sqrt(a2):
+        return None
+    root = np.sqrt(inside)
+    slopes = np.zeros(len(theta))
+    slopes[1], slopes[2] = -a1 / (2.0 * a2 * root), 1.0 / (a2 * root) - root / (2.0 * a2**2)
+    return scale * root / (2.0 * a2), scale * slopes
 
 
 def relative(gain: Complex) -> Family:

@@ -11,10 +11,11 @@ from patternscore.errors import Unreadable
 from patternscore.frame import Frame
 from patternscore.measure.align import Alignment, refine, settle
 from patternscore.measure.design import design, lay_out
-from patternscore.measure.family import Family, Start, around, nearest
+from patternscore.measure.family import Family, Start, around, nearest, pole_frequency
 from patternscore.measure.profile import Pile, Run, Strip, coding_of, cut_strip, pile_up
 from patternscore.measure.response import Response, fit
 from patternscore.measure.stepbasis import BINS, edge_of
+from patternscore.reading import Estimate
 
 Array = npt.NDArray[np.float64]
 ROUNDING_LEFT = 0.05  # share of the variance of rounding that stays when it has been taken out by a model
@@ -37,6 +38,8 @@ class FittedEdge:
         Of the first strip.
     response : Response
         What they show, in cycles per sample (along) or per line (across).
+    poles : Estimate or None
+        Frequency of the pole pair of the fitted family, cycles per sample, if it has one that rings.
     slant : float
         Samples an edge moves from line to line (along), or lines from sample to sample (across).
     """
@@ -45,6 +48,7 @@ class FittedEdge:
     pile: Pile
     alignment: Alignment
     response: Response
+    poles: Estimate | None
     slant: float
 
     @property
@@ -82,7 +86,8 @@ def fit_edges(frame: Frame, blocks: list[list[Run]], *, across: bool) -> FittedE
     coding = coding_of(frame)
     scale = float(np.mean(np.concatenate([strip.step for strip in strips])))
     pile = pile_up(strips, coding)
-    family = _family(_begin(strips, pile, across=across), across=across)
+    start = _begin(strips, pile, across=across)
+    family = _family(start, across=across)
     layout = lay_out(strips, pile, neighbours=not across)
     model = layout.profiles(edge_of(family.shape(family.start)[0], layout.reach(0)))
     alignment = _refine(strips, model, jitter=not across)
@@ -101,7 +106,17 @@ def fit_edges(frame: Frame, blocks: list[list[Run]], *, across: bool) -> FittedE
         layout = lay_out(strips, pile, neighbours=not across)
         posed = design(layout, pile, coding.step / scale, ROUNDING_LEFT * coding.left_by_noise, posed)
         response = fit(posed, _again(family, response), taps, own=not across)
-    return FittedEdge(tuple(strips), pile, alignment, response, _slant(strips))
+    poles = None if across else _poles(response, start.scale)
+    return FittedEdge(tuple(strips), pile, alignment, response, poles, _slant(strips))
+
+
+def _poles(response: Response, scale: float) -> Estimate | None:
+    found = pole_frequency(response.theta, scale)
+    if found is None:
+        return None
+    value, slopes = found
+    covariance = response.covariance[: len(slopes), : len(slopes)] * max(response.chi2, 1.0)
+    return Estimate(value, float(np.sqrt(max(slopes @ covariance @ slopes, 0.0))))
 
 
 def _strips(frame: Frame, blocks: list[list[Run]], *, across: bool) -> list[Strip]:

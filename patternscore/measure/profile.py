@@ -139,6 +139,13 @@ def slope_of(model: Array) -> Array:
     return slope
 
 
+def _bend_of(model: Array) -> Array:
+    """Second derivative of profiles on bins, per sample squared; nought at their ends."""
+    bend = np.zeros_like(model)
+    bend[..., 1:-1] = (model[..., 2:] + model[..., :-2] - 2.0 * model[..., 1:-1]) * BINS**2
+    return bend
+
+
 @dataclass(frozen=True, slots=True)
 class Coding:
     """Codes of a frame: IRE of a step between codes (0: none), of code 0, and noise before rounding (codes)."""
@@ -288,7 +295,7 @@ def _pile(first: int, sums: Array, model: Array | None, code: float) -> Pile:
     if model is not None:
         # A bin holds the mean of a bent curve about its centre, not its value there.
         rate = slope_of(model)
-        mean -= share * (off * rate + square * slope_of(rate) / 2.0)
+        mean -= share * (off * rate + square * _bend_of(model) / 2.0)
     flat = variance < (0.25 * code) ** 2
     if model is not None:
         flat &= np.abs(rate) < STILL * code
