@@ -15,6 +15,7 @@ from patternscore.reading import Estimate
 Array = npt.NDArray[Any]
 _STRAY = 2e-5  # share of the samples that may lie beyond the end of a converter's range
 _DITHER = 0.3  # rms noise in codes that carries levels over to the neighbouring codes
+_NEIGHBOURS = 5  # codes beside the end; their median, since one may hold a flat area of the pattern
 _RIM = 2  # samples and lines left out inside the picture's sides, where blanking rings
 
 
@@ -96,8 +97,7 @@ def _pile(tally: Array, black: int, noise: float, held: float | None) -> tuple[i
     end = 0
     if black > 0 and tally[:black].sum() <= _STRAY * total < tally[black]:
         end = black
-    own, first, second = (float(count) for count in tally[end : end + 3])
+    own, near = float(tally[end]), float(np.median(tally[end + 1 : end + 1 + _NEIGHBOURS]))
     natural = end == black and noise < _DITHER and (held is None or abs(held - end) > 1.0)
-    pile = 0.0 if natural else max(own - max(first, 2.0 * first - second), 0.0)
-    spread = np.sqrt(own + 5.0 * first + second + 1.0)
-    return end, Estimate(100.0 * pile / total, 100.0 * float(spread) / total)
+    pile = 0.0 if natural else max(own - near, 0.0)
+    return end, Estimate(100.0 * pile / total, 100.0 * float(np.sqrt(own + near + 1.0)) / total)

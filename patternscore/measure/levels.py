@@ -123,9 +123,13 @@ def _fit(stair: Steps, others: Steps) -> tuple[Transfer, Array]:
     level = seen - np.concatenate([stair.departure, others.departure])
     nominal = np.concatenate([stair.nominal, others.nominal])
     sigma = np.concatenate([stair.sigma, others.sigma])
+    scale = (nominal >= 0.0) & (nominal <= 100.0)  # bars beyond black and white lie off any curve
     if float(np.abs(level - seen).max()) < _FLAT:
-        return fit_transfer(nominal, seen, sigma), seen
-    trials = [(free, held, fit_transfer(nominal, free, sigma, held)) for free, held in _orders(level, seen)]
+        return fit_transfer(nominal[scale], seen[scale], sigma[scale]), seen
+    trials = [
+        (free, held, fit_transfer(nominal[scale], free[scale], sigma[scale], held[scale]))
+        for free, held in _orders(level, seen)
+    ]
     # The first is the likeliest: others must explain the steps clearly better.
     free, held, best = min(trials, key=lambda trial: trial[2].misfit * (1.0 if trial is trials[0] else 1.3))
     stuck = np.isin(nominal, best.nominal[best.held_low | best.held_high])

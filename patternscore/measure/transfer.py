@@ -17,6 +17,7 @@ _LOWEST, _HIGHEST = 45.0, 60.0  # nominal levels up to (from) which steps may be
 _FEWEST = 5  # free steps
 _SEEN = 25.0  # gain in chi-square by which held steps are believed
 _OWN = 0.08  # IRE by which steps stray of themselves
+_CAMERA = 0.65  # exponent up to which a curve may be a camera's
 _DEAD = 0.3  # of the slope due, up to which steps are held for certain
 _ALIVE = 0.6  # of the slope due, from which steps still differ as they should
 
@@ -197,17 +198,16 @@ def _running(values: Array) -> Array:
 
 
 def _steps_live_below(nominal: Array, measured: Array, low: int, gamma: float, swing: float) -> bool:
-    """Whether steps set aside at black, where the curve is steep, still rise as an even staircase does."""
-    if low == 0:
+    """Whether steps set aside at black under a curve like a camera's still rise as an even staircase does.
+
+    Such transfers are straight near black, where a power would rise without bound.
+    """
+    if low == 0 or gamma > _CAMERA:
         return False
-    reach = float(nominal[low] - nominal[0])
-    due = swing / 100.0 * reach
-    inner = float(nominal[low - 1] - nominal[0])
-    if inner > 0 and float(measured[low - 1] - measured[0]) < _DEAD * swing / 100.0 * inner:
+    due = swing / 100.0 * (nominal - nominal[0])
+    if due[low - 1] > 0 and float(measured[low - 1] - measured[0]) < _DEAD * due[low - 1]:
         return False
-    steep = swing * ((nominal[low] / 100.0) ** gamma - (nominal[0] / 100.0) ** gamma)
-    rise = float(measured[low] - measured[nominal <= nominal[0]].mean())
-    return bool(steep > 1.15 * due and rise > _ALIVE * due)
+    return bool(float(measured[low] - measured[nominal <= nominal[0]].mean()) > _ALIVE * due[low])
 
 
 def _slopes(part: Array, swing: float, gamma: float) -> Array:
