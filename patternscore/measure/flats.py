@@ -12,8 +12,7 @@ from patternscore.frame import Frame
 from patternscore.located import Located
 from patternscore.measure.ground import Ground, read_ground
 from patternscore.measure.noise import Noise, coding_noise, read_noise
-from patternscore.measure.patches import Cores, beside_edges, cut_cores
-from patternscore.plan import Patch, Plan
+from patternscore.measure.patches import Cores, cut_cores
 
 _CLEAR = 0.8  # IRE
 
@@ -37,15 +36,10 @@ class FlatAreas:
     ground: Ground | Unreadable
 
 
-@lru_cache(maxsize=8)
-def _kinds(plan: Plan) -> tuple[tuple[Patch, ...], ...]:
-    return (plan.field, plan.steps, plan.flats, *beside_edges(plan))
-
-
 @lru_cache(maxsize=1)  # the levels and the stability group read the same areas one after the other
 def flat_areas(frame: Frame, located: Located) -> FlatAreas:
     """Cut out the flat areas of a frame and read what they tell together."""
-    field, steps, flats, *beside = cut_cores(frame, located, _kinds(located.plan))
+    field, steps, flats, *beside = cut_cores(frame, located)
     noise: Noise | Unreadable
     ground: Ground | Unreadable
     try:

@@ -122,6 +122,7 @@ class _Means:
     mean: Array
     weight: Array
     area: Array
+    row: Array
     slopes: int
     normal: Array
     right: Array
@@ -190,8 +191,8 @@ def _line_means(frame: Frame, seen: tuple[Cores, ...], coding: float) -> _Means:
     scaled = (design * mass[:, None]).T
     power = float((mass * level**2).sum())
     least = coding**2 * float(mass.sum()) / first  # all lines of an area are off together
-    areas = np.concatenate(area)[kept]
-    return _Means(design, level, mass, areas, 2 * len(kinds), scaled @ design, scaled @ level, power, least)
+    shared = np.concatenate(area)[kept], row[kept]
+    return _Means(design, level, mass, *shared, 2 * len(kinds), scaled @ design, scaled @ level, power, least)
 
 
 def _every_bar() -> tuple[float, ...]:
@@ -222,7 +223,7 @@ def _solve(means: _Means, bars: tuple[float, ...]) -> _Fit:
 
 
 def _togetherness(means: _Means, left: Array) -> float:
-    """How much more the lines of one area stray together than lines on their own would."""
-    total = np.bincount(means.area, means.weight * left)
-    power = np.bincount(means.area, (means.weight * left) ** 2)
-    return max(1.0, float((total**2).sum() / max(power.sum(), 1e-12)))
+    """How much more the means of one area, or of one line of the frame, stray together than on their own."""
+    power = max(float(((means.weight * left) ** 2).sum()), 1e-12)
+    totals = (np.bincount(shared, means.weight * left) for shared in (means.area, means.row))
+    return max(1.0, *(float((total**2).sum()) / power for total in totals))

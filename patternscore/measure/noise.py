@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
@@ -129,6 +130,7 @@ def _area_variances(cores: Cores, frame: Frame) -> tuple[Array, Array, Array, Ar
     return variance, np.full(count, float(freedom)), np.full(count, float(spare)), between
 
 
+@lru_cache(maxsize=32)
 def _row_basis(tall: int) -> Array:
     """Orthonormal columns over the rows: level and slope of each field, without the common level."""
     at = np.arange(tall)

@@ -67,19 +67,34 @@ class Cores:
         return Cores(chosen, self.levels[kept], self.left[kept], self.top[kept])
 
 
-def cut_cores(frame: Frame, located: Located, kinds: tuple[tuple[Patch, ...], ...]) -> tuple[Cores, ...]:
-    """Cut the cores of patches out of a frame, kind by kind.
+@dataclass(frozen=True, slots=True, eq=False)
+class Kinds:
+    """Patches of a plan, those of one kind and about one size together.
 
-    Parameters
-    ----------
-    kinds : tuple of tuples of Patch
-        Patches of one kind are of about one size. Those outside the frame, or much smaller than the usual one
-        of their kind, are left out.
+    ``corners`` are those of their cores in picture fractions, (4 n, 2).
     """
-    boxes = _boxes(located.warp, kinds)
+
+    patches: tuple[tuple[Patch, ...], ...]
+    corners: Array
+
+
+@lru_cache(maxsize=8)
+def kinds_of(plan: Plan) -> Kinds:
+    """Ground, steps and flats of a plan, then the areas beside its edges."""
+    kinds = (plan.field, plan.steps, plan.flats, *beside_edges(plan))
+    return Kinds(kinds, _corners(kinds))
+
+
+def cut_cores(frame: Frame, located: Located) -> tuple[Cores, ...]:
+    """Cut the cores of a plan's patches out of a frame, kind by kind in the order of ``kinds_of``.
+
+    Patches outside the frame, or much smaller than the usual one of their kind, are left out.
+    """
+    kinds = kinds_of(located.plan)
+    boxes = _boxes(located.warp, kinds.corners)
     luma = np.ascontiguousarray(frame.luma)
-    parts = np.split(boxes, np.cumsum([len(kind) for kind in kinds])[:-1])
-    return tuple(_cut(luma, kind, part) for kind, part in zip(kinds, parts, strict=True))
+    parts = np.split(boxes, np.cumsum([len(kind) for kind in kinds.patches])[:-1])
+    return tuple(_cut(luma, kind, part) for kind, part in zip(kinds.patches, parts, strict=True))
 
 
 def _cut(luma: Array, patches: tuple[Patch, ...], boxes: Array) -> Cores:
@@ -98,9 +113,7 @@ def _cut(luma: Array, patches: tuple[Patch, ...], boxes: Array) -> Cores:
     return Cores(kept, np.take(luma.ravel(), at), left, top)
 
 
-@lru_cache(maxsize=8)
 def _corners(kinds: tuple[tuple[Patch, ...], ...]) -> Array:
-    """Corners of the cores in picture fractions, (4 n, 2)."""
     rects = [(p.rect.x0, p.rect.y0, p.rect.x1, p.rect.y1) for kind in kinds for p in kind]
     x0, y0, x1, y1 = np.array(rects, dtype=np.float64).reshape(-1, 4).T
     wide, tall = x1 - x0, y1 - y0
@@ -109,9 +122,9 @@ def _corners(kinds: tuple[tuple[Patch, ...], ...]) -> Array:
     return np.stack([np.stack([x0, x1, x0, x1], 1), np.stack([y0, y0, y1, y1], 1)], 2).reshape(-1, 2)
 
 
-def _boxes(warp: Warp, kinds: tuple[tuple[Patch, ...], ...]) -> Array:
+def _boxes(warp: Warp, corners: Array) -> Array:
     """Upright boxes that lie wholly inside the patches' cores, (n, 4) first and last sample and line."""
-    places = warp.to_frame(_corners(kinds)).reshape(-1, 4, 2)
+    places = warp.to_frame(corners).reshape(-1, 4, 2)
     x, y = places[..., 0], places[..., 1]
     first = np.ceil([np.maximum(x[:, 0], x[:, 2]), np.maximum(y[:, 0], y[:, 1])])
     last = np.floor([np.minimum(x[:, 1], x[:, 3]), np.minimum(y[:, 2], y[:, 3])])
