@@ -8,6 +8,7 @@ import numpy as np
 import numpy.typing as npt
 import scipy.fft
 
+from patternscore.chain.optics import Picture
 from patternscore.chain.scene import scan
 from patternscore.chain.settings import Chain
 from patternscore.standard import Raster
@@ -34,13 +35,12 @@ def frequencies(chain: Chain) -> Axis:
     return np.asarray(np.fft.rfftfreq(count, 1.0 / (chain.sample_rate * chain.oversample)))
 
 
-def line_spectra(chain: Chain, picture: Lines) -> Spectra:
+def line_spectra(chain: Chain, picture: Picture) -> Spectra:
     """Spectrum of each line as it reaches the sampler, before jitter, wander, bounce and noise.
 
     Parameters
     ----------
-    picture : (h, w) float32
-        IRE.
+    picture : Picture
 
     Returns
     -------

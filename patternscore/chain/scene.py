@@ -7,25 +7,22 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from patternscore.chain.optics import Picture, filtered, sampled_rows, spot_taps
 from patternscore.chain.scanmap import picture_points
 from patternscore.chain.settings import Chain
 
 Lines = npt.NDArray[np.float32]
 Axis = npt.NDArray[np.float64]
 
-# The pixels of a picture (a box) and linear interpolation between them (a triangle, which is two boxes) lose
-# sinc(w / 2 pi)^3 at w radians per pixel; these taps gain 1 + w^2 / 8 + 17 w^4 / 1920, its inverse up to w^4.
-_PIXEL_INVERSE = np.array([0.0192708333, -0.2020833333, 1.365625, -0.2020833333, 0.0192708333])
 _ROUNDING = 1e-6
 
 
-def scan(chain: Chain, picture: Lines, times: Axis, lines: Axis) -> Lines:
+def scan(chain: Chain, picture: Picture, times: Axis, lines: Axis) -> Lines:
     """Levels on a time axis: picture with gain and setup while the beam is on, 0 IRE in blanking.
 
     Parameters
     ----------
-    picture : (h, w) float32
-        IRE.
+    picture : Picture
     times : (n,) float64
         us from the start of active line time, evenly spaced.
     lines : (rows,) float64
@@ -54,21 +51,15 @@ def scan(chain: Chain, picture: Lines, times: Axis, lines: Axis) -> Lines:
     return levels
 
 
-def _seen(chain: Chain, picture: Lines, along: tuple[Axis, float, Lines], down: tuple[Axis, Lines]) -> Lines:
+def _seen(chain: Chain, picture: Picture, along: tuple[Axis, float, Lines], down: tuple[Axis, Lines]) -> Lines:
     """Levels while the beam is on; ``along`` and ``down`` are places, (step) and share not blanked."""
-    import cv2
-
-    height, width = picture.shape
     times, step, on_line = along
     lines, on_field = down
     x, y = picture_points(chain, times, lines)
-    shape = np.broadcast_shapes(x.shape, y.shape)
-    columns = np.broadcast_to(x * np.float32(width) - np.float32(0.5), shape)
-    rows = np.broadcast_to(y * np.float32(height) - np.float32(0.5), shape)
-    spotted = _spotted(chain, picture)
-    remapped = cv2.remap(spotted, columns, rows, cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
-    seen = np.asarray(remapped, dtype=np.float32)
+    seen = _looked_up(chain, picture, x, y)
     if chain.gamma != 1.0:
+        import cv2
+
         seen = 100.0 * np.asarray(cv2.pow(np.maximum(seen / np.float32(100.0), 0.0), chain.gamma), dtype=np.float32)
     _cut(seen.T, x.T, chain.standard.active_us / step, on_line[:, None])
     _cut(seen, y, chain.standard.raster(chain.lines, chain.samples, chain.sample_rate).height_lines, on_field)
@@ -79,6 +70,30 @@ def _seen(chain: Chain, picture: Lines, along: tuple[Axis, float, Lines], down: 
     seen *= on_line
     seen *= on_field
     return seen
+
+
+def _looked_up(chain: Chain, picture: Picture, x: Lines, y: Lines) -> Lines:
+    """Levels of the picture, seen by the spot, at points (fractions)."""
+    import cv2
+
+    width, height = picture.size
+    raster = chain.standard.raster(chain.lines, chain.samples, chain.sample_rate)
+    across = spot_taps(
+        chain.spot_us / chain.standard.active_us * width,
+        chain.standard.active_us / width,
+        chain.sample_rate * chain.oversample,
+    )
+    sigma = chain.spot_lines / raster.height_lines * height
+    rows = y * np.float32(height) - np.float32(0.5)
+    if rows.shape[1] == 1 and sigma > 0.6:  # each line of the frame lies along a row: its spot can be exact
+        source = sampled_rows(picture, across, tuple(rows[:, 0].tolist()), sigma)
+        rows = np.arange(len(rows), dtype=np.float32)[:, None]
+    else:
+        source = filtered(picture, across, spot_taps(sigma))
+    shape = np.broadcast_shapes(x.shape, rows.shape)
+    columns = np.broadcast_to(x * np.float32(width) - np.float32(0.5), shape)
+    seen = cv2.remap(source, columns, np.broadcast_to(rows, shape), cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
+    return np.asarray(seen, dtype=np.float32)
 
 
 def _cut(seen: Lines, place: Lines, steps: float, unblanked: Lines) -> None:
@@ -98,24 +113,3 @@ def _covered(place: npt.NDArray[Any], length: float) -> Lines:
     """Share of an interval of 1 about each place that lies between 0 and ``length``."""
     start = np.clip(place + 0.5, 0.0, 1.0)
     return np.asarray(np.minimum(start, np.clip(length + 0.5 - place, 0.0, 1.0)), dtype=np.float32)
-
-
-def _spotted(chain: Chain, picture: Lines) -> Lines:
-    """Picture as the spot sees it; what pixels and interpolation lose is made good beforehand."""
-    import cv2
-
-    height, width = picture.shape
-    raster = chain.standard.raster(chain.lines, chain.samples, chain.sample_rate)
-    across = np.convolve(_gaussian_taps(chain.spot_us / chain.standard.active_us * width), _PIXEL_INVERSE)
-    down = np.convolve(_gaussian_taps(chain.spot_lines / raster.height_lines * height), _PIXEL_INVERSE)
-    seen = cv2.sepFilter2D(picture, cv2.CV_32F, across, down, borderType=cv2.BORDER_REPLICATE)
-    return np.asarray(seen, dtype=np.float32)
-
-
-def _gaussian_taps(sigma: float) -> npt.NDArray[np.float64]:
-    """Weights of a Gaussian of this sigma in pixels; three weights of the same variance where it is small."""
-    if sigma < 0.6:
-        return np.array([sigma**2 / 2, 1.0 - sigma**2, sigma**2 / 2])
-    reach = int(np.ceil(4.5 * sigma))
-    weights = np.exp(-0.5 * (np.arange(-reach, reach + 1) / sigma) ** 2)
-    return np.asarray(weights / weights.sum())

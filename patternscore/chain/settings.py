@@ -54,7 +54,7 @@ class Chain:
     bits : int or None
         Depth of the code; None leaves levels uncoded.
     oversample : int
-        Points of the analogue line per sample.
+        Points of the analogue line per sample, 4 or more.
     """
 
     standard: Standard = STANDARD_525
@@ -96,8 +96,8 @@ class Chain:
     def __post_init__(self) -> None:
         object.__setattr__(self, "response", tuple(self.response))
         line = self.standard.line_us * self.sample_rate
-        if not 2 <= self.samples <= line or self.lines < 2 or self.oversample < 2:
-            raise UsageError(f"a line holds 2 to {int(line)} samples; rows and oversample must be 2 or more")
+        if not 2 <= self.samples <= line or self.lines < 2 or self.oversample < 4:
+            raise UsageError(f"a line holds 2 to {int(line)} samples; rows must be 2 or more, oversample 4 or more")
         if min(self.gamma, self.gain) <= 0 or min(self.spot_us, self.spot_lines, self.jitter_ns, self.wander_ns) < 0:
             raise UsageError("gamma and gain must be above 0, spot, jitter and wander 0 or more")
         if max(abs(self.rotation), abs(self.skew)) > 10.0:
