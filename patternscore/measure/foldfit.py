@@ -24,6 +24,8 @@ KNOWN_START, KNOWN_RATIO, KNOWN_TURN = (0.0, 0.15), (np.log(4.8), 0.6), (np.log(
 # Where the scanned picture is the whole chart, the scan turns at its very edge: as likely as all other places
 # together. AT_EDGE is how near (bars), FAVOUR what that is worth in chi-squared.
 AT_EDGE, FAVOUR = 0.03, 8.0
+# From grab to grab the mean over kinds moves by this part of their spread, and each fit by this much (bars).
+CHANGES, SETTLED = 0.17, 0.002
 STEPS = np.array([0.02, 0.02, 0.02, 0.05])
 
 
@@ -81,7 +83,7 @@ def fit_fold(view: View) -> FoldFit:
     spread = float(weights @ (lengths - length) ** 2)
     noise, misfit = problem.judge(best.best(1)[0], best.kind)
     return FoldFit(
-        Estimate(length, float(np.sqrt(noise + spread))),
+        Estimate(length, float(np.sqrt(noise + CHANGES**2 * spread + (SETTLED * view.bar) ** 2))),
         float(weights @ free[:, 0]) * view.bar,
         float(np.exp(best.best(1)[0, 2])),
         misfit,

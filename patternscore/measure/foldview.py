@@ -53,7 +53,7 @@ class View:
         return self.start if self.blanked else -1e3
 
 
-def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float, late: float = 0.0) -> View:
+def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float, late: float = 0.0, *, wary: bool = True) -> View:
     """Look at one edge of the picture.
 
     Parameters
@@ -68,6 +68,8 @@ def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float, late: floa
         Frame coordinate at which the active line (the picture lines) starts or ends there.
     late : float
         How much later than the scan's place rising edges come, and earlier falling ones.
+    wary : bool
+        Whether to leave out edges near the picture's edge that do not keep to the pace of the others.
 
     Raises
     ------
@@ -78,7 +80,7 @@ def view_edge(plan: Plan, bars: list[Bars], side: Side, start: float, late: floa
     start = count - 1 - start if side in FAR else start
     bands, edges, length = [], [], 0.0
     for one in bars:
-        found = _band(plan, one, side, start, late)
+        found = _band(plan, one, side, start, late, wary)
         if found is not None:
             bands.append(found[0])
             edges.append(found[1])
@@ -99,7 +101,7 @@ def _bars_across(ruler: Ruler) -> float:
     return len(ruler.bits) / (ruler.boundaries[-1] - ruler.boundaries[0])
 
 
-def _band(plan: Plan, bars: Bars, side: Side, start: float, late: float) -> tuple[Band, Array] | None:
+def _band(plan: Plan, bars: Bars, side: Side, start: float, late: float, wary: bool) -> tuple[Band, Array] | None:
     """One band seen from the edge, and where its certified bar edges lie; None where it cannot be used."""
     strip = bars.strip
     count, far = strip.mean.size, side in FAR
@@ -117,7 +119,9 @@ def _band(plan: Plan, bars: Bars, side: Side, start: float, late: float) -> tupl
     if use.size < NEIGHBOURS + 6 or at[use[0]] > 0.16:
         return None
     bar = 1.0 / _bars_across(strip.ruler)
-    forward, first = _forward(at[use], (place - late * sign)[use], doubt[use], bar, PACE[strip.axis])
+    steady = (place - late * sign)[use]
+    first = _first_in_pace(at[use], steady, doubt[use], bar, PACE[strip.axis]) if wary else 0
+    forward = _forward(at[use[first:]], steady[first:], doubt[use[first:]], bar, wary)
     use = use[first:]
     level = bars.level
     t = np.arange(count) + bars.lag * (np.arange(count) % 2)
@@ -142,12 +146,11 @@ def _band(plan: Plan, bars: Bars, side: Side, start: float, late: float) -> tupl
     return replace(reader, met=met, read=read), place[use]
 
 
-def _forward(at: Array, place: Array, doubt: Array, bar: float, pace: float) -> tuple[Array, int]:
-    """Forward scan near the edge, and the index of the first edge that keeps to it.
+def _first_in_pace(at: Array, place: Array, doubt: Array, bar: float, pace: float) -> int:
+    """Index of the first edge from which on all keep the pace of the others.
 
-    Each edge is foretold from the ``NEIGHBOURS`` next ones further in, by a cubic: folded bars may look
-    like the code by chance, but they do not keep to its pace. The scan itself is a parabola through certified
-    edges clear of the turn.
+    Each edge is foretold from the ``NEIGHBOURS`` next ones further in, by a cubic: folded bars may look like
+    the code by chance, but they do not keep to its pace.
     """
     near = np.arange(min(at.size - NEIGHBOURS, 14))
     from_these = near[:, None] + 1 + np.arange(NEIGHBOURS)[None, :]
@@ -159,12 +162,18 @@ def _forward(at: Array, place: Array, doubt: Array, bar: float, pace: float) -> 
     foretold = np.einsum("kj,knj,kn->k", spread[:, 0], weighted, place[from_these])
     doubtful = np.sqrt(doubt[near] ** 2 + spread[:, 0, 0])
     off = np.abs(place[near] - foretold) > pace + 2.0 * doubtful
-    first = int(near[off][-1]) + 1 if off.any() else 0
-    clear = (at >= at[first] + 1.5 * bar) & (at <= at[first] + 0.2)
+    return int(near[off][-1]) + 1 if off.any() else 0
+
+
+def _forward(at: Array, place: Array, doubt: Array, bar: float, wary: bool) -> Array:
+    """Forward scan near the edge as a parabola: through edges clear of a turn, or mostly the nearest ones."""
+    away = (at - at[0]) / bar
+    clear = (away >= 1.5) & (away <= 16.0) if wary else away <= 16.0
+    nearness = 1.0 if wary else np.exp(-away[clear, None] / 2.0)
     powers = np.polynomial.polynomial.polyvander(at[clear], 2)
-    weighted = powers / (doubt[clear, None] + 0.02) ** 2
+    weighted = nearness * powers / (doubt[clear, None] + 0.02) ** 2
     normal = weighted.T @ powers + np.diag([0.0, 0.0, 1e-4])
-    return np.asarray(np.linalg.solve(normal, weighted.T @ place[clear])), first
+    return np.asarray(np.linalg.solve(normal, weighted.T @ place[clear]))
 
 
 def _content(plan: Plan, ruler: Ruler, covered: tuple[float, float], side: Side) -> tuple[Array, Array]:

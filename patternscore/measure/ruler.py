@@ -29,6 +29,7 @@ FEWEST = 4  # rows that a mean needs
 MOST_TURNS = 6
 SETTLED = 0.02  # samples: edges that move less than this need no further turn
 CLEAR = 2.5  # samples between the edge of blanking and a bar edge that is not disturbed by it
+READMITTED = 1.5  # samples by which an edge at the end of a ruler may leave the run of the warp's error
 REACH = 5  # samples either side of its expected place within which an edge is sought
 
 
@@ -181,8 +182,9 @@ def straighten(frame: Frame, warp: Warp, ruler: Ruler, bend: Bend | None = None)
     depth = abs(ruler.band[1] - ruler.band[0]) * float(np.mean(slopes[:28, 1 - along, 1 - along]))
     half = max(int(depth * USED / 2), 2)
     steps = np.arange(-half, half + 1, dtype=np.float64)[:, None]
-    across_map = (centre[None, :] + steps).astype(np.float32)
-    along_map = (index[None, :] + lean[None, :] * steps).astype(np.float32)
+    # Whole rows are taken: what lies between two would share their noise.
+    across_map = np.rint(centre[None, :] + steps).astype(np.float32)
+    along_map = (index[None, :] + lean[None, :] * (across_map - centre[None, :])).astype(np.float32)
     maps = (along_map, across_map) if axis == "h" else (across_map, along_map)
     rows = cv2.remap(frame.luma, maps[0], maps[1], cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
     inside = (across_map >= 0) & (across_map <= limit)
@@ -202,7 +204,7 @@ def _alike(rows: npt.NDArray[np.float32], inside: npt.NDArray[np.bool_]) -> npt.
     usual_row = rows.mean(0) - rows.mean()
     centred = rows - rows.mean(1)[:, None]
     if inside.all():
-        gain = centred @ usual_row / (usual_row @ usual_row)
+        gain = centred @ usual_row / max(float(usual_row @ usual_row), 1e-3)
     else:
         shown = inside.astype(np.float32)
         gain = (centred * shown) @ usual_row / np.maximum(shown @ usual_row**2, 1e-3)
@@ -333,7 +335,25 @@ def _agree(
             return place, good
         curve = design @ np.linalg.lstsq(design[good], off[good], rcond=None)[0]
         good = found & (np.abs(off - curve) < limit)
+    for order in (np.arange(at.size), np.arange(at.size)[::-1]):
+        _readmit(at, off, found, good, order)
     return np.where(good, place, expected + curve), good
+
+
+def _readmit(
+    at: Array, off: Array, found: npt.NDArray[np.bool_], good: npt.NDArray[np.bool_], order: npt.NDArray[np.int64]
+) -> None:
+    """Take edges at the end of a ruler back where the warp goes astray ever more from edge to edge.
+
+    A scan that settles late does that; ``good`` is changed in place.
+    """
+    first = int(np.argmax(good[order]))
+    for position in range(first - 1, max(first - 5, -1), -1):
+        edge, one, two = order[position], order[position + 1], order[position + 2]
+        foretold = off[one] + (off[one] - off[two]) * (at[edge] - at[one]) / (at[one] - at[two])
+        if not (found[edge] and good[one] and good[two] and abs(off[edge] - foretold) < READMITTED):
+            return
+        good[edge] = True
 
 
 def _refine(

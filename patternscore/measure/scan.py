@@ -13,7 +13,7 @@ from patternscore.errors import Unreadable
 from patternscore.frame import Frame
 from patternscore.located import Located
 from patternscore.measure.fold import PLAIN, Fold, find_fold, no_fold, suspect
-from patternscore.measure.foldview import FAR, View, view_edge
+from patternscore.measure.foldview import FAR, view_edge
 from patternscore.measure.ruler import Axis, Bars, Bend, axis_of, read_bars, sharpen, straighten
 from patternscore.measure.scanmap import ScanMap, crush, fit_scan, linearity
 from patternscore.measure.stepshape import StepShape
@@ -99,7 +99,8 @@ def _read_axis(findings: Findings, frame: Frame, located: Located, axis: Axis, s
             raise Unreadable(reasons[0])
         scan = fit_scan(bars)
     except Unreadable as reason:
-        findings.miss(reason.reason, *keys)
+        findings.miss(reason.reason, *keys[:-2])
+        _size_from_crosshatch(findings, located, axis, nominal)
         return
     folds = _folds(findings, frame, located, bars, scan, nominal, shape)
     last = (frame.samples if axis == "h" else frame.rows) - 0.5
@@ -109,6 +110,9 @@ def _read_axis(findings: Findings, frame: Frame, located: Located, axis: Axis, s
         if fold is not None and fold.length.value > 0:
             starts[end] = last - 0.5 - fold.turning if end else fold.turning
     span = (starts[0], starts[1])
+    if any(fold.length.value > 0 for fold in folds.values()):
+        bars = [_between(one, span) for one in bars]
+        scan = fit_scan(bars)
     findings.traces[f"scan_{axis}"] = Scan(scan, tuple(bars), span, nominal, folds)
     _speeds(findings, scan, span)
     _size(findings, scan, nominal)
@@ -143,13 +147,13 @@ def _folds(
     folds: dict[str, Fold] = {}
     for side, start in zip(SIDES[axis], nominal, strict=True):
         try:
-            view = view_edge(located.plan, bars, side, start, scan.late)
+            view = view_edge(located.plan, bars, side, start, scan.late, wary=False)
             plain = suspect(view)
             if plain < PLAIN:
                 fold = no_fold(plain, scan.edge_sigma)
             else:
                 sharp = bars if shape is not None else sharpen(bars)
-                fold = _look_closely(frame, located, sharp, view, plain, Edge(side, start, scan.late))
+                fold = _look_closely(frame, located, sharp, plain, Edge(side, start, scan.late))
         except Unreadable as reason:
             findings.miss(reason.reason, f"fold_{side}")
             continue
@@ -157,6 +161,11 @@ def _folds(
         length = Estimate(fold.length.value / per_unit, fold.length.sigma / per_unit)
         findings.add(f"fold_{side}", "us" if axis == "h" else "lines", length, f"{side} edge")
     return folds
+
+
+def _between(bars: Bars, span: tuple[float, float]) -> Bars:
+    """Leave out bar edges that were read where the scan runs backwards, by chance."""
+    return replace(bars, good=bars.good & (bars.place > span[0]) & (bars.place < span[1]))
 
 
 @dataclass(frozen=True, slots=True)
@@ -168,9 +177,10 @@ class Edge:
     late: float
 
 
-def _look_closely(frame: Frame, located: Located, bars: list[Bars], view: View, plain: float, edge: Edge) -> Fold:
+def _look_closely(frame: Frame, located: Located, bars: list[Bars], plain: float, edge: Edge) -> Fold:
     """Fit a fold; where the bands lean, straighten them anew for a scan that runs backwards there."""
     tilted = max(one.strip.tilt for one in bars) > TILTED
+    view = view_edge(located.plan, bars, edge.side, edge.start, edge.late)
     turning, ratio = view.certified, 0.0
     for _ in range(3 if tilted else 1):
         if tilted:
@@ -225,4 +235,21 @@ def _size(findings: Findings, scan: ScanMap, nominal: tuple[float, float]) -> No
     middle = scan.linear((0.0, 1.0), (0.5, 0.5))
     off = middle.value - (nominal[0] + nominal[1]) / 2
     findings.add(SIZE[scan.axis], "%", Estimate(100 * size.value / length, 100 * size.sigma / length))
-    findings.add(f"centre_{scan.axis}", "%", Estimate(100 * off / length, 100 * middle.sigma / length))
+    spread = math.hypot(middle.sigma, scan.common_sigma)
+    findings.add(f"centre_{scan.axis}", "%", Estimate(100 * off / length, 100 * spread / length))
+
+
+def _size_from_crosshatch(findings: Findings, located: Located, axis: Axis, nominal: tuple[float, float]) -> None:
+    """Size and centring where no ruler is seen, from the warp through the crosshatch."""
+    keys = (SIZE[axis], f"centre_{axis}")
+    if located.crossings is None or len(located.crossings.found) < 30:
+        findings.miss("neither rulers nor crosshatch are seen", *keys)
+        return
+    along = 0 if axis == "h" else 1
+    ends = np.full((2, 5, 2), np.linspace(0.1, 0.9, 5)[None, :, None])
+    ends[0, :, along], ends[1, :, along] = 0.0, 1.0
+    first, last = located.warp.to_frame(ends.reshape(10, 2))[:, along].reshape(2, 5).mean(1)
+    length = nominal[1] - nominal[0]
+    sigma = 200.0 * located.misfit / math.sqrt(len(located.crossings.found)) / length
+    findings.add(keys[0], "%", Estimate(100 * (last - first) / length, sigma))
+    findings.add(keys[1], "%", Estimate(50 * (first + last - nominal[0] - nominal[1]) / length, sigma))

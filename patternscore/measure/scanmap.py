@@ -20,6 +20,7 @@ from patternscore.reading import Estimate
 Array = npt.NDArray[np.float64]
 PIECES = {"h": 20, "v": 15}  # spline pieces across the picture
 CELLS = {"h": 16, "v": 12}  # what "local" means for linearity
+ASTRAY = 0.6  # samples or lines: no edge nearer to the curve than this is left out
 SIDE_TERMS = 4
 BENDS = ((3, 1.0), (4, 0.1))  # samples or lines: what third and fourth differences of the spline come to
 CLEAN = 0.005  # samples or lines: error of a bar edge that even a clean picture has
@@ -43,6 +44,8 @@ class ScanMap:
         Of the coefficients, per unit variance of a bar edge.
     edge_sigma : float
         Standard deviation of one bar edge, samples or lines.
+    common_sigma : float
+        Standard deviation of a shift of all bar edges, as line jitter gives it.
     at, place, left : (k,) float64
         Bar edges used: picture fraction, frame coordinate, and departure from the curve.
     first, last : float
@@ -54,6 +57,7 @@ class ScanMap:
     late: float
     covariance: Array
     edge_sigma: float
+    common_sigma: float
     at: Array
     place: Array
     left: Array
@@ -133,7 +137,6 @@ def fit_scan(bars: list[Bars]) -> ScanMap:
     at = np.concatenate([one.at for one in bars])
     place = np.concatenate([one.place for one in bars])
     good = np.concatenate([one.good for one in bars])
-    noise = np.concatenate([one.noise for one in bars])
     doubt = np.concatenate([one.doubt for one in bars])
     sides = np.concatenate([np.full(one.at.size, np.sign(one.strip.across - 0.5)) for one in bars])
     design = _design(at, sides if len(bars) > 1 else np.zeros(at.size), axis)
@@ -143,7 +146,9 @@ def fit_scan(bars: list[Bars]) -> ScanMap:
         penalty = penalty.copy()
         penalty[np.diag_indices(penalty.shape[0])] += np.repeat([0.0, 1.0, 0.0], [PIECES[axis] + 3, SIDE_TERMS, 1])
     # An edge's error: what noise does to it, measured between halves of the bands, and its doubt.
-    spread = float(np.sqrt(np.mean((noise[good] - np.mean(noise[good])) ** 2)))
+    parts = [one.noise[one.good] for one in bars]
+    spread = float(np.sqrt(np.mean(np.concatenate([part - part.mean() for part in parts]) ** 2)))
+    common = float(np.sqrt(np.mean([part.mean() ** 2 for part in parts]) / len(parts)))
     error = np.sqrt(doubt**2 + spread**2 + CLEAN**2)
     used = good
     for _ in range(3):
@@ -152,7 +157,7 @@ def fit_scan(bars: list[Bars]) -> ScanMap:
         coefficients = inverse @ (weighted.T @ place)
         left = (place - design @ coefficients) / error
         limit = max(5.0 * float(np.median(np.abs(left[used]))), 4.0)
-        fresh = good & (np.abs(left) < limit)
+        fresh = good & ((np.abs(left) < limit) | (np.abs(left * error) < ASTRAY))
         if np.array_equal(fresh, used):
             break
         used = fresh
@@ -165,6 +170,7 @@ def fit_scan(bars: list[Bars]) -> ScanMap:
         float(coefficients[-1]),
         (gain @ gain.T)[:-1, :-1],
         spread,
+        common,
         at[used],
         place[used],
         (left * error)[used],
