@@ -42,7 +42,7 @@ def spread(frame, lean, upright=True, size=1.0):
         away = (x - 0.5 - size * lean * (y - 0.5)) * frame.standard.active_us
     else:
         away = (y - 0.5 - size * lean * (x - 0.5)) * raster.height_lines
-    near = (x > 0.3) & (x < 0.7) & (y > 0.05) & (y < 0.95)
+    near = (x > 0.2) & (x < 0.8) & (y > 0.05) & (y < 0.95)
     away, levels = away[near], (frame.luma[near] - 20.0) / 60.0
     order = np.argsort(away)
     return away[order], levels[order]
@@ -115,7 +115,7 @@ def test_truth_along_the_line_is_what_a_noise_free_edge_shows(name):
     # Without a spot across the lines, which would blur the slanted edge along the line too (by 0.05 dB at 5 MHz).
     chain = CHAINS[name].changed(bits=None, spot_lines=0.0)
     known = truth(chain)
-    places, seen = binned(*spread(grab(chain, SLANTED), 0.08, size=chain.sweep_h.size), 0.005, 8.0)
+    places, seen = binned(*spread(grab(chain, SLANTED), 0.08, size=chain.sweep_h.size), 0.005, 13.0)
     frequency = np.linspace(0.05, 6.7, 1331)
     gain = transfer(places, seen, frequency)
     for key, level in (("mtf50_h", 0.5), ("bandwidth_h", 10 ** (-3 / 20))):
