@@ -12,12 +12,13 @@ from functools import cache
 
 from patternscore.plan import Burst, Edge, Grid, Mark, Patch, Plan, Rect, Ruler
 from patternscore.rulers import orientable_sequence
-from patternscore.standard import Standard
+from patternscore.standard import Standard, ire_from_code
 
 COLUMNS, ROWS = 16, 12
-DARK, LIGHT, GROUND = 15.0, 85.0, 50.0
-# Edges swing less, so that an overshoot of half the step still lies inside the coding range.
-EDGE_DARK, EDGE_LIGHT = 25.0, 75.0
+# Tones that are measured against each other are whole codes of BT.601, so that rounding to 8 bits cannot shift
+# them: 49 and 201 about 125; edges swing less, so that an overshoot of half a step stays inside the coding range.
+DARK, LIGHT, GROUND = (float(ire_from_code(code)) for code in (49.0, 201.0, 125.0))
+EDGE_DARK, EDGE_LIGHT = (float(ire_from_code(code)) for code in (71.0, 179.0))
 SLANT = 1.0 / 12.0  # tangent of 4.8 degrees
 H_BARS, V_BARS = 80, 60
 H_ORDER, V_ORDER = 9, 8

@@ -115,7 +115,7 @@ def test_quadrants_of_a_mark_are_of_equal_area_wherever_it_lies():
         reach = int(mark.radius * 743) + 2
         part = picture[y - reach : y + reach + 1, x - reach : x + reach + 1] - layout.GROUND
         assert part.sum() == pytest.approx(0.0, abs=0.05)  # light is as far above the ground as dark is below
-        assert part[reach // 2, reach // 2] * mark.hand == pytest.approx(35.0)
+        assert part[reach // 2, reach // 2] * mark.hand == pytest.approx(layout.LIGHT - layout.GROUND)
 
 
 @pytest.mark.parametrize("standard", [STANDARD_525, STANDARD_625])

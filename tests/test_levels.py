@@ -7,7 +7,7 @@ import pytest
 from levels_by_hand import chart_levels, coded, laid, readings, uncoded
 
 from patternscore.chain import Chain, grab, responses, truth
-from patternscore.layout import chart_plan
+from patternscore.layout import GROUND, chart_plan
 from patternscore.locate import locate
 from patternscore.measure.levels import read_levels
 from patternscore.plan import Patch, Plan, Rect
@@ -140,7 +140,7 @@ def test_tilt_is_read_and_moves_no_level_even_beside_hum(standard, hum):
 def test_slopes_agree_with_a_plane_laid_through_the_ground_by_numpy():
     levels = chart_levels()
     rows, columns = np.mgrid[:480, :720]
-    ground = np.abs(levels - 50.0) < 1e-3
+    ground = np.abs(levels - GROUND) < 1e-3
     tilted = _noisy(levels + 3.0 * (columns / 720 - 0.5) - 2.0 * (rows / 480 - 0.5), 1.0)
     inside = ground & (columns > 60) & (columns < 660) & (rows > 60) & (rows < 420)
     design = np.stack([np.ones(inside.sum()), columns[inside] / 720, rows[inside] / 480], 1)
