@@ -46,15 +46,17 @@ def local_speeds(chain: Chain) -> tuple[float, float]:
 
 
 def sweeps(chain: Chain, delay: float) -> dict[str, float]:
-    """Fold-back, crush, linearity, size and centring, of the sweeps alone (along the picture's own edges).
+    """Fold-back, crush, linearity, size and centring, of the sweeps alone.
 
-    ``delay`` is that of the signal, us: it moves the picture, not the raster.
+    ``delay`` is that of the signal, us: it moves the picture, not the raster. With a bow the size depends on
+    where it is taken, and is left out.
     """
     along, down = _durations(chain)
     known = _sweep(chain.sweep_h, along, ("left", "right", "h", "width"), 16, delay)
     known |= _sweep(chain.sweep_v, down, ("top", "bottom", "v", "height"), 12, 0.0)
     known["aspect_error"] = 100.0 * (known["width"] / known["height"] - 1.0)
-    return known
+    bent = (["width"] if chain.bow_h else []) + (["height"] if chain.bow_v else [])
+    return {key: value for key, value in known.items() if key not in bent and not (bent and key == "aspect_error")}
 
 
 def _sweep(

@@ -24,8 +24,9 @@ def grab(chain: Chain, picture: npt.NDArray[Any] | None = None, seed: int = 0) -
     chain : Chain
         Settings.
     picture : (h, w) array, optional
-        Levels in IRE of exactly the active picture, any size; the package's chart where left out. What its
-        pixels lose along the line is made good, up to 0.35 of their number in cycles over the width.
+        Levels in IRE of exactly the active picture, any size, each pixel the mean over its area; the
+        package's chart where left out. What the pixels' own size loses is made good, up to a third of their
+        number in cycles over the width.
     seed : int
         Noise, jitter, wander and bounce follow from it; the same seed gives the same frame.
 
