@@ -13,6 +13,7 @@ from patternscore.errors import Unreadable
 from patternscore.measure.profile import FEWEST, LOWEST, Strip, slope_of, table
 
 Array = npt.NDArray[np.float64]
+UNLEVEL = 0.1  # IRE rms between the rows that is left alone
 ALIKE = 0.15  # part of the step within which edges of one block are taken to have the same levels
 MOST_CUTS = 3  # windows are cut again while they were off by more than this many samples:
 CLOSE = 1.0
@@ -104,7 +105,8 @@ def _level_rows(strip: Strip, plateaus: Array, side: int) -> None:
     outer = strip.levels[..., :side]
     noise = float(np.mean((outer[..., 1:] - outer[..., :-1]) ** 2)) / (4.0 * side * len(plateaus))
     power = float(np.mean(off**2))
-    if power > 2.0 * noise:
+    if power > 2.0 * noise + UNLEVEL**2:
+        strip.levelled = True
         strip.levels -= (off * (1.0 - noise / power)).astype(np.float32)[:, None]
 
 

@@ -18,6 +18,7 @@ Index = npt.NDArray[np.int64]
 
 NEAR = 6 * BINS  # bins each side of an edge that are taken one by one; further off whole samples will do
 OFFSET = 0.007  # prior sigma of a profile's offset, fraction of the step: tilt, hum, an error of the levels
+FLOOR = 1e-5  # fraction of the step: what is left out of the model anyway
 MIDDLE = 0.05  # prior sigma of the error of the middle between the levels, which shows with the edges' polarity
 BEYOND = 0.3  # prior sigma of what the pattern does beyond the clear part, steps
 BEFORE, AFTER = (5, 12, 24), (5, 12)  # where that may be, samples from the end of the window
@@ -247,9 +248,17 @@ def _rows(layout: Layout, pile: Pile, code: float, residue: float) -> tuple[Arra
     far_rise = slope_of(far) / (BINS * max(code, 1e-9))
     keep = np.concatenate([share.sum(axis=0) > 0, (_coarse_sum(sound * 1.0, coarse) > BINS - 0.1).ravel()])
     count = np.concatenate([worth, far_worth.ravel()])
-    # Over a bin in which the level runs through several codes, rounding errors cancel.
-    rounding = residue * code**2 / 12.0 / (1.0 + np.concatenate([rise, far_rise.ravel()]) ** 2)
-    variance = max(pile.noise, 0.1 * code) ** 2 / count + rounding + 1e-10
+    if pile.rounding is None:
+        # Over a bin in which the level runs through several codes rounding errors cancel, but no further than its
+        # samples are many; edges alike are rounded alike.
+        rise = np.concatenate([rise, far_rise.ravel()])
+        apart = np.concatenate([np.full(len(near), len(share)), np.ones(far.size)]) / count
+        rounding = residue * code**2 / 12.0 * (1.0 / (1.0 + rise**2) + apart)
+    else:
+        fine_rounding = (pile.rounding[:, near] * share).sum(axis=0)
+        rounding = np.concatenate([fine_rounding, (_coarse_sum(pile.rounding, coarse) / BINS / 2.0).ravel()])
+    noise = max(pile.noise, 0.1 * code) if pile.rounding is None else 0.05 * code
+    variance = noise**2 / count + rounding + FLOOR**2
     return np.concatenate([fine, far.ravel()]), np.where(keep, 1.0 / np.sqrt(variance), 0.0)
 
 

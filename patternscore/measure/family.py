@@ -19,6 +19,7 @@ PRIOR = np.array([2.0, 2.0, 2.0, 2.0, 2.0, 0.1, 0.06])  # how far from the start
 LOWEST = np.array([0.0, 0.0, 0.0, -4.0, -20.0, 0.04, 0.003])
 HIGHEST = np.array([20.0, 20.0, 20.0, 20.0, 20.0, 2.0, 0.5])
 GRABBER = (0.455, 0.1)  # a usual anti-alias filter: its middle and width, cycles per sample
+UNUSUAL = 1.5  # how many times better a member must fit without the band limit that a grabber usually has
 DAMPED = 0.85  # damping ratio from which a pole pair is not seen to ring
 OPEN = (2.0, 0.1)  # none to speak of
 
@@ -140,13 +141,15 @@ def transfer(theta: Array, scale: float, nu: Array) -> tuple[Complex, Complex]:
 class Library:
     """Members of the family spread over all that a chain may be, with their step responses.
 
-    ``edges`` and ``slopes`` are (members, bins) on bins of ``first`` and up, less one half.
+    ``edges`` and ``slopes`` are (members, bins) on the window, less one half; ``open`` tells which members have
+    no band limit.
     """
 
     starts: tuple[Start, ...]
     edges: Array
     slopes: Array
     gram: Array
+    open: npt.NDArray[np.bool_]
 
 
 @lru_cache(maxsize=16)
@@ -158,7 +161,8 @@ def library(left: int, right: int, *, across: bool = False) -> Library:
     rows = slice(basis.origin - left * BINS, basis.origin + right * BINS + 1)
     edges = np.hstack([spectra.real, spectra.imag]) @ basis.matrix[rows].T
     slopes = np.gradient(edges, 1.0 / BINS, axis=1)
-    return Library(starts, edges, slopes, _gram(edges, slopes))
+    open_ = np.array([start.theta[5] >= OPEN[0] and not across for start in starts])
+    return Library(starts, edges, slopes, _gram(edges, slopes), open_)
 
 
 def _gram(edges: Array, slopes: Array) -> Array:
@@ -186,8 +190,9 @@ def nearest(window: Array, left: int, right: int, *, used: npt.NDArray[np.bool_]
     seen = np.where(used, window, 0.0)
     inner = np.stack([np.full(len(shelf.starts), seen.sum()), shelf.edges @ seen, shelf.slopes @ seen], axis=1)
     found = np.linalg.solve(gram, inner[..., None])[..., 0]
-    gain = np.einsum("ka,ka->k", found, inner)
-    best = int(np.argmax(gain))
+    left = float(seen @ seen) - np.einsum("ka,ka->k", found, inner)
+    left[shelf.open] *= UNUSUAL
+    best = int(np.argmin(left))
     _, step, shift = found[best]
     start = shelf.starts[best]
     theta = start.theta.copy()

@@ -18,7 +18,6 @@ from patternscore.measure.stepbasis import BINS, edge_of
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[np.float64]
-ROUNDING_LEFT = 0.05  # share of the variance of rounding that stays when it has been taken out by a model
 MISFIT = 2.5  # chi2 per degree of freedom above which another round is worth its time
 FAR = 0.25  # samples of a move after which another is made: the step was no longer a small one
 ROUNDS, ROUNDS_ACROSS = 3, 2
@@ -91,20 +90,20 @@ def fit_edges(frame: Frame, blocks: list[list[Run]], *, across: bool) -> FittedE
     layout = lay_out(strips, pile, neighbours=not across)
     model = layout.profiles(edge_of(family.shape(family.start)[0], layout.reach(0)))
     alignment = _refine(strips, model, jitter=not across)
-    pile = pile_up(strips, coding, model)
     coding = coding.with_noise(pile.noise * scale)
+    pile = pile_up(strips, coding, model)
     layout = lay_out(strips, pile, neighbours=not across)
     posed = design(layout, pile, coding.step / scale, coding.left_by_noise)
     taps = _taps(strips[0], across=across)
     rounds = ROUNDS_ACROSS if across else ROUNDS
     response = fit(posed, family, taps, own=not across)
     for _ in range(rounds - 1):
-        if not coding.coarse and response.chi2 < MISFIT:
+        if response.chi2 < MISFIT:
             break
         alignment = _refine(strips, response.model, jitter=not across)
-        pile = pile_up(strips, coding, response.model, rounding=True)
+        pile = pile_up(strips, coding, response.model)
         layout = lay_out(strips, pile, neighbours=not across)
-        posed = design(layout, pile, coding.step / scale, ROUNDING_LEFT * coding.left_by_noise, posed)
+        posed = design(layout, pile, coding.step / scale, coding.left_by_noise, posed)
         response = fit(posed, _again(family, response), taps, own=not across)
     poles = None if across else _poles(response, start.scale)
     return FittedEdge(tuple(strips), pile, alignment, response, poles, _slant(strips))

@@ -22,6 +22,8 @@ SHORTEST = 5.0  # and at least
 MARGIN = 1.5  # samples kept off what lies beyond the clear part
 END = {"h": 4, "v": 10}  # rows kept off the ends of an edge: spot and error of location, smear along the line
 FEWEST = 12  # lines across an edge
+SHARP = 0.15  # codes of noise below which it shows where a code changes
+TRANSITION = 0.04  # codes by which such a place may be off: where samples happen to lie, errors of the slope
 STILL = 0.1  # codes per sample below which a profile is a plateau
 LOWEST = 6.0  # IRE of step
 
@@ -48,6 +50,8 @@ class Strip:
         Shift of each row against the straight run of its edges, samples.
     field_shift : float
         Across only: how much later an edge lies in the lines 1, 3, 5 ... than in the others, lines.
+    levelled : bool
+        Whether differences of level between the rows have been taken off.
     start : (edges, n) int
         First sample of each window cut.
     levels : (edges, n, window) float32
@@ -64,6 +68,7 @@ class Strip:
     step: Array = field(default_factory=lambda: np.ones(1))
     shifts: Array = field(default_factory=lambda: np.zeros(1))
     field_shift: float = 0.0
+    levelled: bool = False
     start: npt.NDArray[np.int64] = field(default_factory=lambda: np.zeros((1, 1), dtype=np.int64))
     levels: Single = field(default_factory=lambda: np.zeros((1, 1, 1), dtype=np.float32))
 
@@ -117,11 +122,6 @@ class Strip:
         scale = (self.sign / self.step).astype(np.float32)[:, None, None]
         return (levels - self.middle.astype(np.float32)[:, None, None]) * scale
 
-    def unsigned(self, values: Single) -> Single:
-        """Levels in IRE of fractions of the step."""
-        scale = (self.sign * self.step).astype(np.float32)[:, None, None]
-        return values * scale + self.middle.astype(np.float32)[:, None, None]
-
 
 def table(model: Array) -> Single:
     """Flat table of (edges, bins + 2) for ``Strip.bins``."""
@@ -161,30 +161,10 @@ class Coding:
             return self
         return replace(self, noise=float(np.sqrt(max((ire / self.step) ** 2 - 1.0 / 12.0, 0.0))))
 
-    def rounding(self, ire: Single) -> Single:
-        """Mean error in IRE of rounding a level with noise on it.
-
-        The sawtooth of the rounding error, smoothed by the noise: its harmonics k fall as
-        exp(-2 (pi k noise)^2), and from half a code of noise there is nothing left.
-        """
-        place = (ire - np.float32(self.floor)) * np.float32(1.0 / self.step)
-        if self.noise < 0.12:
-            return np.asarray((np.rint(place) - place) * np.float32(self.step))
-        total = np.zeros_like(place)
-        for k in (1, 2, 3):
-            size = (-1.0) ** k / (np.pi * k) * np.exp(-2.0 * (np.pi * k * self.noise) ** 2)
-            total += np.float32(size * self.step) * np.sin(np.float32(2.0 * np.pi * k) * place)
-        return total
-
     @property
     def left_by_noise(self) -> float:
         """Share of the variance of rounding that noise does not smooth away."""
         return float(np.exp(-((2.0 * np.pi * self.noise) ** 2)))
-
-    @property
-    def coarse(self) -> bool:
-        """Whether rounding shows in a mean."""
-        return self.step > 0 and self.noise < 0.5
 
 
 def coding_of(frame: Frame) -> Coding:
@@ -214,6 +194,8 @@ class Pile:
         Bins that hold samples at the end of the coding range.
     noise : float
         rms of a sample about the mean of its bin, fraction of the step.
+    rounding : (edges, bins) float64 or None
+        Variance that rounding leaves in the means where noise does not hide the codes.
     """
 
     first: int
@@ -222,6 +204,7 @@ class Pile:
     flat: npt.NDArray[np.bool_]
     clipped: npt.NDArray[np.bool_]
     noise: float
+    rounding: Array | None = None
 
     @property
     def times(self) -> Array:
@@ -243,9 +226,8 @@ def pile_up(strips: list[Strip], coding: Coding, model: Array | None = None, *, 
     coding : Coding
         How levels were coded.
     model : (edges, bins) array, optional
-        What the profiles are already known to be like: takes out the bend of the profile within a bin.
-    rounding : bool
-        Whether the model is good to a part of a code, so that it also takes out what rounding does to the means.
+        What the profiles are roughly known to be like: takes out the bend of the profile within a bin and, where
+        noise does not hide the codes, what rounding does to the means.
     """
     left, right = strips[0].left, strips[0].right
     edges = sum(len(strip.position) for strip in strips)
@@ -253,28 +235,38 @@ def pile_up(strips: list[Strip], coding: Coding, model: Array | None = None, *, 
     done = 0
     for strip in strips:
         own = slice(done, done + len(strip.position))
-        _pile_strip(sums[:, own], strip, coding, None if model is None else model[own], rounding)
+        _pile_strip(sums[:, own], strip, coding, model is not None)
         done = own.stop
-    scale = float(np.mean(np.concatenate([strip.step for strip in strips])))
-    return _pile(-left * BINS, sums[..., 1:-1], model, coding.step / scale)
+    return _pile(-left * BINS, sums[..., 1:-1], model, _Scale.of(strips, coding))
 
 
-def _pile_strip(sums: Array, strip: Strip, coding: Coding, model: Array | None, rounding: bool) -> None:
+@dataclass(frozen=True, slots=True, eq=False)
+class _Scale:
+    """Codes per unit of a profile with its sign, and code of its middle: (edges, 1) each; 0 codes if not coded."""
+
+    codes: Array
+    middle: Array
+    sharp: bool
+
+    @classmethod
+    def of(cls, strips: list[Strip], coding: Coding) -> _Scale:
+        unit = coding.step if coding.step > 0 else 1.0
+        codes = np.concatenate([strip.sign * strip.step for strip in strips])[:, None] / unit
+        middle = (np.concatenate([strip.middle for strip in strips])[:, None] - coding.floor) / unit
+        whole = all(not strip.levelled for strip in strips)
+        return cls(codes, middle, coding.step > 0 and coding.noise < SHARP and whole)
+
+
+def _pile_strip(sums: Array, strip: Strip, coding: Coding, bent: bool) -> None:
     levels = strip.levels
     index, off = strip.bins()
     low, high = levels.min(), levels.max()
     ends = None
     if low <= coding.limits[0] or high >= coding.limits[1]:
         ends = (levels <= coding.limits[0]) | (levels >= coding.limits[1])
-    if model is not None and rounding and coding.coarse:
-        rate = table(slope_of(model))
-        expected = strip.unsigned(table(model)[index] + rate[index] * off)
-        # On a plateau the model knows no better than the code what is lost below it.
-        moving = np.abs(rate) > np.float32(STILL * coding.step / strip.step.mean())
-        levels = levels - coding.rounding(expected) * moving[index]
     value = strip.signed(levels)
     terms: list[Any] = [None, value, None, None, value * value, ends]
-    if model is not None:
+    if bent:
         terms[2], terms[3] = off, off * off
     flat, shape = index.ravel(), sums.shape[1:]
     for row, term in enumerate(terms):
@@ -283,7 +275,7 @@ def _pile_strip(sums: Array, strip: Strip, coding: Coding, model: Array | None, 
             sums[row] = np.bincount(flat, weights, shape[0] * shape[1]).reshape(shape)
 
 
-def _pile(first: int, sums: Array, model: Array | None, code: float) -> Pile:
+def _pile(first: int, sums: Array, model: Array | None, scale: _Scale) -> Pile:
     count, value, off, square, power, clipped = sums
     share = 1.0 / np.maximum(count, 1.0)
     mean = value * share
@@ -292,14 +284,47 @@ def _pile(first: int, sums: Array, model: Array | None, code: float) -> Pile:
     spread = variance - (slope_of(mean) / BINS) ** 2 / 12.0
     free = float(count.sum() - np.count_nonzero(count))
     noise = np.sqrt(max(float(np.vdot(spread, count)) / max(free, 1.0), 1e-10))
-    if model is not None:
-        # A bin holds the mean of a bent curve about its centre, not its value there.
-        rate = slope_of(model)
-        mean -= share * (off * rate + square * _bend_of(model) / 2.0)
+    code = 1.0 / np.abs(scale.codes)
     flat = variance < (0.25 * code) ** 2
+    rounding = None
     if model is not None:
+        rate = slope_of(model)
         flat &= np.abs(rate) < STILL * code
-    return Pile(first, count, mean, flat, clipped > 0, float(noise))
+        # A bin holds the mean of a bent curve about its centre, not its value there.
+        bent = mean - share * (off * rate + square * _bend_of(model) / 2.0)
+        if scale.sharp:
+            bent, rounding = _between_codes(mean, bent, variance, share, rate / BINS, scale)
+        mean = bent
+    return Pile(first, count, mean, flat, clipped > 0, float(noise), rounding)
+
+
+def _between_codes(
+    mean: Array, bent: Array, variance: Array, share: Array, rise: Array, scale: _Scale
+) -> tuple[Array, Array]:
+    """Profile from the places where the code changes, and the variance that rounding leaves in it.
+
+    Without noise a bin over which the level moves by less than a code says nothing of its level but where in
+    it the code changes: there the level is the transition between two codes, and a part ``p`` of the samples
+    beyond it tells how far from the centre that is. (Code transition levels are how the tests of converters
+    place a level, too.)
+
+    Parameters
+    ----------
+    rise : (edges, bins) array
+        How far the profile moves over a bin.
+    """
+    codes = np.abs(scale.codes)
+    place = scale.middle + scale.codes * mean
+    low = np.floor(place + 1e-4)
+    part = place - low
+    spread = variance * codes**2
+    moved = np.abs(rise) * codes
+    between = (np.abs(spread - part * (1.0 - part)) < 0.02) & (spread > 1e-3) & (moved < 1.0)
+    held = (spread < 1e-3) & (moved < 1.0)
+    at = (low + 0.5 + moved * (part - 0.5) - scale.middle) / scale.codes
+    left = (1.0 / (1.0 + moved**2) + share) / 12.0
+    left = np.where(between, moved**2 * share / 12.0 + TRANSITION**2, np.where(held, 1.0 / 12.0, left))
+    return np.where(between, at, bent), left / codes**2
 
 
 @dataclass(frozen=True, slots=True, eq=False)
