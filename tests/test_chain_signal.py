@@ -1,5 +1,8 @@
 """Levels, coding, noise and timing of the chain."""
 
+import doctest
+import importlib
+
 import numpy as np
 import pytest
 
@@ -209,3 +212,10 @@ def test_the_chart_is_shown_where_no_picture_is_given(grabbed):
     assert grabbed(Chain()) is frame
     assert frame.luma.max() > 95
     assert grabbed(Chain(standard=STANDARD_625)).luma.shape == (576, 720)
+
+
+@pytest.mark.parametrize("module", ["render", "truth"])
+def test_the_examples_given_to_users_are_true(module):
+    found = doctest.testmod(importlib.import_module(f"patternscore.chain.{module}"))
+    assert found.attempted >= 3
+    assert found.failed == 0

@@ -104,6 +104,7 @@ def _add_tilt(chain: Chain, spectra: Spectra, times: Axis, lines: Axis) -> None:
 
 def _line_offsets(chain: Chain) -> npt.NDArray[Any]:
     """Hum, and the difference in level between the fields, IRE per line."""
-    mains = chain.hum_hz or (60.0 if chain.standard.name == "525" else 50.0)
+    usual = 60.0 if chain.standard.name == "525" else 50.0
+    mains = usual if chain.hum_hz is None else chain.hum_hz
     hum = chain.hum_percent * np.sin(2e-6 * np.pi * mains * line_times(chain) + chain.hum_phase)
     return np.asarray(hum + chain.field_level_offset * (np.arange(chain.lines) % 2), dtype=np.float32)
