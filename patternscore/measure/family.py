@@ -1,4 +1,4 @@
-"""A family of transfer functions: Gaussian spot, two poles and a zero, delay, and a band limit."""
+"""A family of transfer functions: Gaussian spot, aperture, two poles and a zero, delay, and a band limit."""
 
 from __future__ import annotations
 
@@ -14,10 +14,11 @@ from patternscore.measure.stepbasis import BINS, step_basis
 Array = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
 
-# theta: 0 Gaussian, 1 and 2 denominator, 3 numerator, 4 delay (samples), 5 band limit, 6 its width (cycles/sample)
-PRIOR = np.array([2.0, 2.0, 2.0, 2.0, 2.0, 0.1, 0.06])  # how far from the start each may well go
-LOWEST = np.array([0.0, 0.0, 0.0, -4.0, -20.0, 0.04, 0.003])
-HIGHEST = np.array([20.0, 20.0, 20.0, 20.0, 20.0, 2.0, 0.5])
+# theta: 0 Gaussian, 1 and 2 pole pair, 3 zero, 4 delay (samples), 5 band limit, 6 its width (cycles per sample),
+# 7 square of the aperture
+PRIOR = np.array([2.0, 2.0, 2.0, 2.0, 2.0, 0.1, 0.06, 0.5])  # how far from the start each may well go
+LOWEST = np.array([0.0, 0.0, 0.0, -4.0, -20.0, 0.04, 0.003, 0.0])
+HIGHEST = np.array([20.0, 20.0, 20.0, 20.0, 20.0, 2.0, 0.5, 20.0])
 GRABBER = (0.455, 0.1)  # a usual anti-alias filter: its middle and width, cycles per sample
 UNUSUAL = 1.5  # how many times better a member must fit without the band limit that a grabber usually has
 DAMPED = 0.85  # damping ratio from which a pole pair is not seen to ring
@@ -51,7 +52,7 @@ class Family:
     highest: Array
 
 
-def around(start: Start, free: tuple[int, ...] = tuple(range(7))) -> Family:
+def around(start: Start, free: tuple[int, ...] = tuple(range(8))) -> Family:
     """Give the family about a member, some of its parameters free."""
     moving = np.array(free)
     nu = step_basis().nu
@@ -97,8 +98,8 @@ def transfer(theta: Array, scale: float, nu: Array) -> tuple[Complex, Complex]:
 
     Parameters
     ----------
-    theta : (7,) array
-        c, a1, a2, b, t0, middle and width of the band limit.
+    theta : (8,) array
+        c, a1, a2, b, t0, middle and width of the band limit, q.
     scale : float
         Frequency that g = nu / scale is in units of, cycles per sample.
     nu : (n,) array
@@ -106,21 +107,23 @@ def transfer(theta: Array, scale: float, nu: Array) -> tuple[Complex, Complex]:
 
     Returns
     -------
-    (n,) and (7, n) complex
+    (n,) and (8, n) complex
 
     Notes
     -----
-    H = exp(-c g^2) (1 + j b g) / (1 + j a1 g - a2 g^2) exp(-2 pi j nu t0), times a half cosine from 1 to 0.
-    The coefficients of the polynomials, not the poles, are the parameters: a pole that is not needed goes to
+    H = exp(-c g^2) sinc(sqrt(q) g) (1 + j b g) / (1 + j a1 g - a2 g^2) exp(-2 pi j nu t0), times a half cosine
+    from 1 to 0. The coefficients of the polynomials, not the poles, are the parameters: a pole that is not needed goes to
     infinity where its coefficient goes to nought, and nothing becomes singular on the way.
     """
-    c, a1, a2, b, t0, middle, width = theta
+    c, a1, a2, b, t0, middle, width, square = theta
     g = nu / scale
     upper, lower = 1.0 + 1j * b * g, 1.0 + 1j * a1 * g - a2 * g**2
     slope = np.clip((nu - middle) / width + 0.5, 0.0, 1.0)
     limit = 0.5 + 0.5 * np.cos(np.pi * slope)
     fall = -0.5 * np.pi / width * np.sin(np.pi * slope)
-    open_part = np.exp(-c * g**2 - 2j * np.pi * nu * t0) / lower
+    through, opening = _aperture(square, g)
+    bare = np.exp(-c * g**2 - 2j * np.pi * nu * t0) / lower * limit
+    open_part = np.exp(-c * g**2 - 2j * np.pi * nu * t0) / lower * through
     shaped = open_part * upper
     whole = shaped * limit
     slopes = np.stack(
@@ -132,9 +135,17 @@ def transfer(theta: Array, scale: float, nu: Array) -> tuple[Complex, Complex]:
             -2j * np.pi * nu * whole,
             -shaped * fall,
             -shaped * fall * (nu - middle) / width,
+            bare * upper * opening,
         ]
     )
     return whole, slopes
+
+
+def _aperture(square: float, g: Array) -> tuple[Array, Array]:
+    """Response of an aperture of a width whose square is given, and its slope in that."""
+    x = np.pi * np.sqrt(max(square, 1e-6)) * g
+    through = np.sinc(x / np.pi)
+    return through, (np.cos(x) - through) / (2.0 * max(square, 1e-6))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -200,9 +211,11 @@ def nearest(window: Array, left: int, right: int, *, used: npt.NDArray[np.bool_]
     return Start(theta, start.scale)
 
 
-def _member(scale: float, c: float, a1: float, a2: float, b: float, limit: tuple[float, float]) -> Start:
+def _member(
+    scale: float, c: float, a1: float, a2: float, b: float, limit: tuple[float, float], square: float = 0.0
+) -> Start:
     # Its delay puts the middle of the area under its line spread at time 0, as the edges are set at first.
-    return Start(np.array([c, a1, a2, b, -(a1 - b) / (2 * np.pi * scale), *limit]), scale)
+    return Start(np.array([c, a1, a2, b, -(a1 - b) / (2 * np.pi * scale), *limit, square]), scale)
 
 
 def _along() -> list[Start]:
@@ -213,6 +226,11 @@ def _along() -> list[Start]:
         _member(scale, *shape, limit)
         for scale in np.geomspace(0.05, 0.6, 15)
         for shape in shapes
+        for limit in (GRABBER, OPEN)
+    ]
+    found += [
+        _member(scale, 0.05, 0.0, 0.0, 0.0, limit, 0.36)
+        for scale in np.geomspace(0.05, 0.6, 25)
         for limit in (GRABBER, OPEN)
     ]
     found += [_member(0.5, 0.0, 0.0, 0.0, 0.0, (middle, 0.02)) for middle in np.geomspace(0.06, 0.5, 50)]
