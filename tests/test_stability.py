@@ -9,7 +9,7 @@ from scipy.signal import convolve2d
 
 from patternscore.chain import Chain, grab, responses
 from patternscore.frame import average
-from patternscore.layout import chart_plan
+from patternscore.layout import GROUND, chart_plan
 from patternscore.locate import locate
 from patternscore.measure.ground import line_seconds
 from patternscore.measure.stability import read_between, read_stability
@@ -99,7 +99,7 @@ def test_hum_at_twice_mains_is_read():
 
 def test_hum_agrees_with_a_sinusoid_fitted_to_line_means_by_numpy():
     levels = chart_levels()
-    ground = np.abs(levels - 50.0) < 1e-3
+    ground = np.abs(levels - GROUND) < 1e-3
     seconds = line_seconds(uncoded(levels), np.arange(480))
     hummed = levels + _noise(1.0) + 1.7 * np.sin(2.0 * np.pi * 60.0 * seconds + 1.0)[:, None]
     count = ground.sum(1)

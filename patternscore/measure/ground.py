@@ -100,13 +100,26 @@ def read_ground(frame: Frame, seen: tuple[Cores, ...], coding: float = 0.0) -> G
     trials = [_solve(means, bars) for mains in MAINS_HZ for bars in ((mains,), (2 * mains,), (mains, 2 * mains))]
     local = 60.0 if frame.standard.name == "525" else 50.0  # the mains where the standard was at home
     best = min(trials, key=lambda trial: trial.cost(local))
-    believed = plain.misfit - best.misfit > _SEEN * best.scale * len(best.bars)
-    chosen = best if believed else plain
-    if not believed:
-        best = min((trial for trial in trials if len(trial.bars) == 1), key=lambda trial: trial.misfit)
-    line, down = (chosen.estimate(means.slopes + which) for which in (0, 1))
-    hum = best.amplitude(means.slopes + 2, believed)
-    return Ground(line, down, hum, chosen.bars, chosen.solved[means.slopes + 2 :], frame)
+    # The scale of either fit alone misleads: bars leave the plain one too large, bars that follow what areas
+    # differ by leave the best one too small.
+    scale = float(np.sqrt(plain.scale * best.scale))
+    believed = plain.misfit - best.misfit > _SEEN * scale * len(best.bars)
+    start = means.slopes
+    if believed:
+        line, down, hum = best.estimate(start), best.estimate(start + 1), best.amplitude(start + 2, True)
+        return Ground(line, down, hum, best.bars, best.solved[start + 2 :], frame)
+    # Bars too faint to be believed may still be there, and then pass for a slope.
+    rival = min((trial for trial in trials if trial.bars == (local,)), key=lambda trial: trial.misfit)
+    share = float(np.clip((plain.misfit - rival.misfit) / (_SEEN * rival.scale), 0.0, 1.0)) ** 2
+    line, down = (_between(plain.estimate(at), rival.estimate(at), share) for at in (start, start + 1))
+    faint = min((trial for trial in trials if len(trial.bars) == 1), key=lambda trial: trial.misfit)
+    hum = _between(faint.amplitude(start + 2, False), rival.amplitude(start + 2, False), share)
+    return Ground(line, down, hum, (), plain.solved[start + 2 :], frame)
+
+
+def _between(own: Estimate, rival: Estimate, share: float) -> Estimate:
+    """An estimate, as unsure as a rival of this share makes it."""
+    return Estimate(own.value, float(np.hypot(own.sigma, share * (rival.value - own.value))))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -139,9 +152,13 @@ class _Fit:
     scale: float
 
     def cost(self, local: float) -> float:
-        """Misfit, and what more bars, or those of the other mains, must better it by."""
-        foreign = self.bars[0] % local != 0
-        return self.misfit + _SEEN * self.scale * (len(self.bars) + foreign)
+        """Misfit, and what more bars, or less likely ones, must better it by.
+
+        Less likely are those of the other mains, and those at twice mains alone: with a slope beside them they
+        pass for one at mains.
+        """
+        unlikely = float(self.bars[0] % local != 0) + 0.5 * float(min(self.bars) not in MAINS_HZ)
+        return self.misfit + _SEEN * self.scale * (len(self.bars) + unlikely)
 
     def estimate(self, which: int) -> Estimate:
         return Estimate(float(self.solved[which]), float(np.sqrt(self.covariance[which, which])))
