@@ -3,30 +3,22 @@
 from __future__ import annotations
 
 import hashlib
-import io
-import os
 import re
-import stat
-import warnings
+from collections.abc import Iterator
 from dataclasses import replace
 from pathlib import Path
-from typing import Any
 
-import numpy as np
-import numpy.typing as npt
-
+from patternscore.decode import decode
 from patternscore.errors import UnscorableFrame, UsageError
+from patternscore.files import read_bytes, shown
 from patternscore.frame import Frame, frame_from_codes
+from patternscore.luma import luma_codes
 from patternscore.standard import KNOWN_SIZES, Levels, Standard, standard_named
 
-Array = npt.NDArray[Any]
 SUFFIXES = (".png", ".tif", ".tiff", ".bmp", ".jpg", ".jpeg", ".gif", ".webp")
 LARGEST_FILE = 512 * 1024 * 1024  # bytes
-LARGEST_PICTURE = 64_000_000  # samples: far beyond any frame, small enough to decode safely
 MOST_PAGES = 600
-SMALLEST = 64  # samples and lines
-LUMA_WEIGHTS = (0.299, 0.587, 0.114)  # ITU-R BT.601: luma from R, G, B
-_TIFF_MAGIC = (b"II*\0", b"MM\0*", b"II+\0", b"MM\0+")
+MOST_SAMPLES = 256_000_000  # of all pages together: a GiB of levels
 
 
 def load_frame(
@@ -46,7 +38,7 @@ def load_frame(
     sample_rate : float, optional
         Sample clock in MHz; needed where the size does not tell.
     levels : {"video", "full"}
-        How codes stand for levels: 16 to 235, or the whole range.
+        How codes stand for levels: 16 to 235 (of 8 bits), or the whole range.
 
     Raises
     ------
@@ -54,6 +46,11 @@ def load_frame(
         When the file holds no readable picture; the message says what to do.
     UsageError
         When the picture's size needs a standard and a clock.
+
+    Notes
+    -----
+    Luma of colours is 0.299 R + 0.587 G + 0.114 B (ITU-R BT.601). Files made from video in RGB often have the
+    whole range: the frame then carries a note, and ``levels="full"`` reads it.
     """
     return load_frames(path, standard=standard, sample_rate=sample_rate, levels=levels, most=1)[0]
 
@@ -66,201 +63,68 @@ def load_frames(
     levels: Levels = "video",
     most: int = MOST_PAGES,
 ) -> list[Frame]:
-    """Read all pictures of a file (pages, or pictures of an animation) as frames; see ``load_frame``."""
-    path = Path(path)
-    data = _read(path)
+    """Read all pictures of a file (pages, or pictures of an animation) as frames; see ``load_frame``.
+
+    Parameters
+    ----------
+    most : int
+        Pictures to read at most.
+    """
+    data = read_bytes(path, LARGEST_FILE)
+    name = shown(Path(path).name)
+    frames = list(_frames(data, name, standard, sample_rate, levels, most))
     digest = hashlib.sha256(data).hexdigest()
-    try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore")
-            pictures = _decode(data, path.name, most)
-    except UnscorableFrame:
-        raise
-    except Exception as error:  # decoders raise anything at all on broken data; none of it may reach a user
-        reason = " ".join(str(error).split())[:80] or type(error).__name__
-        raise UnscorableFrame(f"{path.name}: broken or cut short ({reason}); grab it again") from None
-    frames = []
-    for number, picture in enumerate(pictures):
-        name = path.name if len(pictures) == 1 else f"{path.name} page {number + 1}"
-        luma, notes = _luma(picture, name)
-        frame = _frame(luma, name, standard, sample_rate, levels, digest)
-        frames.append(replace(frame, notes=(*notes, *_range_notes(luma, levels))))
-    return frames
+    if len(frames) == 1:
+        return [replace(frames[0], sha256=digest)]
+    return [replace(frame, sha256=digest, name=f"{name} page {number}") for number, frame in enumerate(frames, start=1)]
 
 
-def _read(path: Path) -> bytes:
-    """Bytes of a regular file of a sensible size."""
-    try:
-        status = os.stat(path)
-        if stat.S_ISDIR(status.st_mode):
-            raise UsageError(f"{path}: is a folder; score its files, or use compare {path}")
-        if not stat.S_ISREG(status.st_mode):
-            raise UnscorableFrame(f"{path}: is no regular file; name a picture file")
-        if status.st_size == 0:
-            raise UnscorableFrame(f"{path.name}: is empty; grab it again")
-        if status.st_size > LARGEST_FILE:
-            raise UnscorableFrame(
-                f"{path.name}: {status.st_size // 2**20} MiB is too large for a frame; save it as PNG"
-            )
-        return path.read_bytes()
-    except FileNotFoundError:
-        raise UnscorableFrame(f"{path}: no such file; check the name") from None
-    except OSError as error:
-        raise UnscorableFrame(f"{path}: cannot be read ({error.strerror}); check its permissions") from None
-    except ValueError:
-        raise UnscorableFrame(f"{path!s}: is no file name; check it") from None
-
-
-def _decode(data: bytes, name: str, most: int) -> list[Array]:
-    if data[:4] in _TIFF_MAGIC:
-        return _decode_tiff(data, name, most)
-    from PIL import Image, UnidentifiedImageError
-
-    try:
-        picture = Image.open(io.BytesIO(data), formats=["PNG", "BMP", "JPEG", "GIF", "WEBP"])
-    except UnidentifiedImageError:
-        raise UnscorableFrame(f"{name}: is no picture; give a PNG, TIFF, BMP or JPEG file") from None
-    with picture:
-        _check_size(*picture.size, name)
-        if picture.format == "PNG" and data[24:25] == b"\x10":
-            picture.load()  # raises where data are missing, which the next decoder would paper over
-            return [_decode_deep(data)]
-        pages = min(getattr(picture, "n_frames", 1), most)
-        found = []
-        for page in range(pages):
-            picture.seek(page)
-            found.append(_plain(picture))
-        return found
-
-
-def _plain(picture: Any) -> Array:
-    """Pixels of a picture of 8 bits or less, palettes and the like resolved."""
-    if picture.mode in ("L", "RGB", "RGBA", "I;16", "I;16B"):
-        return np.array(picture)
-    if picture.mode == "LA":
-        return np.array(picture)
-    has_alpha = picture.mode in ("PA", "La", "RGBa") or "transparency" in picture.info
-    if picture.mode in ("1", "L"):
-        return np.array(picture.convert("L"))
-    return np.array(picture.convert("RGBA" if has_alpha else "RGB"))
-
-
-def _decode_deep(data: bytes) -> Array:
-    """16-bit PNG, grey or colour, with all its bits."""
-    import cv2
-
-    found = cv2.imdecode(np.frombuffer(data, np.uint8), cv2.IMREAD_UNCHANGED)
-    if found is None:
-        raise ValueError("16-bit PNG could not be decoded")
-    pixels: Array = np.asarray(found)
-    if pixels.ndim == 3 and pixels.shape[2] in (3, 4):
-        order = [2, 1, 0, 3][: pixels.shape[2]]
-        pixels = pixels[..., order]
-    return pixels
-
-
-def _decode_tiff(data: bytes, name: str, most: int) -> list[Array]:
-    import tifffile
-
-    found = []
-    with tifffile.TiffFile(io.BytesIO(data)) as file:
-        for number, page in enumerate(file.pages):
-            if number >= most:
-                break
-            rows, samples = page.shape[:2] if page.shape[-1] <= 4 or len(page.shape) == 2 else page.shape[-2:]
-            _check_size(int(samples), int(rows), name)
-            found.append(_tiff_page(page, data, number))
-    if not found:
-        raise UnscorableFrame(f"{name}: holds no picture; grab it again")
-    return found
-
-
-def _tiff_page(page: Any, data: bytes, number: int) -> Array:
-    try:
-        pixels: Array = np.asarray(page.asarray())
-    except ValueError as error:
-        if "imagecodecs" not in str(error):
-            raise
-        from PIL import Image  # knows the compressions that need a codec of their own
-
-        with Image.open(io.BytesIO(data)) as picture:
-            picture.seek(number)
-            return _plain(picture)
-    if pixels.ndim == 3 and pixels.shape[0] in (3, 4) and pixels.shape[2] > 4:
-        pixels = np.moveaxis(pixels, 0, -1)  # planes one after another
-    if getattr(page, "photometric", None) is not None and int(page.photometric) == 0:
-        pixels = np.iinfo(pixels.dtype).max - pixels if pixels.dtype.kind == "u" else ~pixels
-    return pixels.astype(np.uint8) * 255 if pixels.dtype == bool else pixels
-
-
-def _check_size(width: int, height: int, name: str) -> None:
-    if width < SMALLEST or height < SMALLEST:
-        raise UnscorableFrame(f"{name}: {width} x {height} is too small to hold a pattern; grab a whole frame")
-    if width * height > LARGEST_PICTURE:
-        raise UnscorableFrame(
-            f"{name}: {width} x {height} is too large for a video frame; save it at the grabber's own size"
-        )
-
-
-def _luma(pixels: Array, name: str) -> tuple[Array, list[str]]:
-    """Codes as float32 on a scale of 8 bits, and what was noticed."""
-    notes: list[str] = []
-    if pixels.dtype == np.uint8:
-        scale = 1.0
-    elif pixels.dtype == np.uint16:
-        scale = 1.0 / 256.0
-    elif pixels.dtype.kind == "f":
-        if not np.isfinite(pixels).all():
-            raise UnscorableFrame(f"{name}: holds values that are no numbers; export it as 16-bit integers")
-        raise UnscorableFrame(f"{name}: holds fractions instead of codes; export it as 8- or 16-bit integers")
-    else:
-        raise UnscorableFrame(f"{name}: {pixels.dtype} samples are not supported; export it as 8 or 16 bit")
-    if pixels.ndim == 2:
-        return pixels.astype(np.float32) * np.float32(scale), notes
-    channels = pixels.shape[2]
-    if channels in (2, 4) and int(pixels[..., -1].min()) < np.iinfo(pixels.dtype).max:
-        notes.append("The file has a transparency channel; it was ignored.")
-    if channels <= 2:
-        return pixels[..., 0].astype(np.float32) * np.float32(scale), notes
-    if channels > 4:
-        raise UnscorableFrame(f"{name}: has {channels} channels; export it as grey or RGB")
-    weights = (np.array(LUMA_WEIGHTS) * scale).astype(np.float32)
-    return np.asarray(pixels[..., :3].astype(np.float32) @ weights), notes
-
-
-def _frame(
-    codes: Array, name: str, standard: str | None, sample_rate: float | None, levels: Levels, digest: str
-) -> Frame:
-    rows, samples = codes.shape
-    found, clock = standard_of(samples, rows, name, standard, sample_rate)
-    return frame_from_codes(codes, found, clock, levels=levels, name=name, sha256=digest)
+def _frames(
+    data: bytes, name: str, standard: str | None, sample_rate: float | None, levels: Levels, most: int
+) -> Iterator[Frame]:
+    total = 0
+    for picture in decode(data, name, most):
+        rows, samples = picture.pixels.shape[:2]
+        total += rows * samples
+        if total > MOST_SAMPLES:
+            raise UnscorableFrame(f"{name}: its pages are too many to read at once; split the file")
+        found, clock = standard_of(samples, rows, name, standard, sample_rate)
+        codes = luma_codes(picture, name, levels)
+        frame = frame_from_codes(codes.luma, found, clock, levels=levels, bits=codes.bits, name=name)
+        yield replace(frame, notes=codes.notes)
 
 
 def standard_of(
     samples: int, rows: int, name: str, standard: str | None, sample_rate: float | None
 ) -> tuple[Standard, float]:
-    """Standard and sample clock of a frame size, or as told."""
+    """Standard and sample clock of a frame size, or as told.
+
+    Raises
+    ------
+    UsageError
+        When the size is no known one and not both are told, or the clock does not fit.
+    """
     known = KNOWN_SIZES.get((samples, rows))
     if sample_rate is not None and not 1.0 <= sample_rate <= 1000.0:
         raise UsageError(f"{sample_rate:g} MHz is no sample clock of a frame; give one from 1 to 1000")
-    if standard is not None and sample_rate is not None:
-        return standard_named(standard), sample_rate
-    if known is None:
+    if known is None and (standard is None or sample_rate is None):
+        raise UsageError(f"{name}: {samples} x {rows} is no size of a known standard; {_wanted(standard, sample_rate)}")
+    named, usual = known or ("", 0.0)
+    found, clock = standard_named(standard or named), sample_rate or usual
+    if samples / clock > found.line_us:
         raise UsageError(
-            f"{name}: {samples} x {rows} is no size of a known standard; name it with --standard 525 or 625 "
-            "and the sample clock with --sample-rate"
+            f"{name}: {samples} samples at {clock:g} MHz last longer than a line of {found.line_us:.1f} us; "
+            "check --sample-rate"
         )
-    return standard_named(standard or known[0]), sample_rate or known[1]
+    return found, clock
 
 
-def _range_notes(codes: Array, levels: Levels) -> list[str]:
-    """Say where codes do not fit the range they are said to have."""
-    if levels == "full":
-        return []
-    low, high = float((codes < 1.0).mean()), float((codes > 254.0).mean())
-    if low > 0.002 and high > 0.002:
-        return ["Codes reach 0 and 255: if the file is full-range, say --levels full."]
-    return []
+def _wanted(standard: str | None, sample_rate: float | None) -> str:
+    if sample_rate is not None:
+        return "name it with --standard 525 or 625"
+    if standard is not None:
+        return "name the sample clock with --sample-rate"
+    return "name it with --standard 525 or 625 and the sample clock with --sample-rate"
 
 
 def list_frames(folder: Path | str) -> list[Path]:
@@ -272,24 +136,29 @@ def list_frames(folder: Path | str) -> list[Path]:
         When there is no such folder, or no picture in it.
     """
     folder = Path(folder)
-    if not folder.is_dir():
-        raise UsageError(f"{folder}: is no folder; name the folder that holds the frames")
     for place in (folder, folder / "frames"):
-        if place.is_dir():
-            try:
-                found = [
-                    file
-                    for file in place.iterdir()
-                    if file.suffix.lower() in SUFFIXES and not file.name.startswith(".")
-                ]
-            except OSError as error:
-                raise UsageError(f"{place}: cannot be read ({error.strerror}); check its permissions") from None
-            if found:
-                return sorted(found, key=lambda file: natural(file.name))
-    raise UsageError(f"{folder}: holds no frames; put PNG, TIFF, BMP or JPEG files there")
+        if found := _pictures_in(place, place == folder):
+            return sorted(found, key=lambda file: natural(file.name))
+    raise UsageError(f"{shown(folder)}: holds no frames; put PNG, TIFF, BMP or JPEG files there")
+
+
+def _pictures_in(place: Path, named: bool) -> list[Path]:
+    """Picture files of one folder; only the one that was named must be there."""
+    try:
+        return [file for file in place.iterdir() if _is_picture(file)]
+    except (FileNotFoundError, NotADirectoryError, ValueError):
+        if named:
+            raise UsageError(f"{shown(place)}: is no folder; name the folder that holds the frames") from None
+        return []
+    except OSError as error:
+        raise UsageError(f"{shown(place)}: cannot be read ({error.strerror}); check its permissions") from None
+
+
+def _is_picture(file: Path) -> bool:
+    return file.suffix.lower() in SUFFIXES and not file.name.startswith(".") and not file.is_dir()
 
 
 def natural(name: str) -> list[tuple[int, int, str]]:
     """Sorting key that puts 2 before 10."""
-    parts = re.split(r"(\d+)", name.lower())
-    return [(0, int(part), "") if part.isdigit() else (1, 0, part) for part in parts]
+    parts = re.split(r"([0-9]+)", name.lower())
+    return [(0, int(part), "") if part.isdecimal() and part.isascii() else (1, 0, part) for part in parts]
