@@ -35,12 +35,16 @@ class Crossings:
 
 @dataclass(frozen=True, slots=True)
 class RasterEdges:
-    """Where the picture ends against blanking, frame coordinates; None where no blanking is seen there."""
+    """Where the picture ends against blanking, frame coordinates; None where no blanking is seen there.
+
+    ``sigmas`` are one standard deviation of each, in the order of the fields.
+    """
 
     left: float | None
     right: float | None
     top: float | None
     bottom: float | None
+    sigmas: tuple[float, float, float, float] = (0.03, 0.03, 0.03, 0.03)
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -8,10 +8,12 @@ import numpy as np
 import numpy.typing as npt
 
 from patternscore.located import RasterEdges
+from patternscore.reading import Estimate
 from patternscore.standard import Raster
 
 Array = npt.NDArray[Any]
 _SMOOTH = 5  # lines averaged before a line's onset is read
+_SHARED = _SMOOTH / (_SMOOTH - 2)  # every third of them is read: neighbours share lines
 
 
 def raster_edges(luma: Array, raster: Raster) -> RasterEdges:
@@ -33,18 +35,17 @@ def raster_edges(luma: Array, raster: Raster) -> RasterEdges:
     top = cv2.blur(luma[:tall], (4 * _SMOOTH, 1))[:, :: 2 * _SMOOTH].T
     bottom = cv2.blur(luma[-tall:], (4 * _SMOOTH, 1))[::-1, :: 2 * _SMOOTH].T
 
-    def place(onset: float | None, last: int | None) -> float | None:
-        return onset if onset is None or last is None else last - onset
+    found = [_onset(side) for side in (left, right, top, bottom)]
+    last = (None, samples - 1, None, rows - 1)
+    ends = [
+        None if onset is None else onset.value if end is None else end - onset.value
+        for onset, end in zip(found, last, strict=True)
+    ]
+    sigmas = [0.0 if onset is None else onset.sigma for onset in found]
+    return RasterEdges(ends[0], ends[1], ends[2], ends[3], (sigmas[0], sigmas[1], sigmas[2], sigmas[3]))
 
-    return RasterEdges(
-        place(_onset(left), None),
-        place(_onset(right), samples - 1),
-        place(_onset(top), None),
-        place(_onset(bottom), rows - 1),
-    )
 
-
-def _onset(lines: Array) -> float | None:
+def _onset(lines: Array) -> Estimate | None:
     """Position at which lines leave blanking, from their first sample on; None where they start in picture."""
     blank = float(np.median(lines[:, 0]))
     spread = 1.4826 * float(np.median(np.abs(lines[:, 0] - blank)))
@@ -68,5 +69,8 @@ def _onset(lines: Array) -> float | None:
     if len(onset) < 8:
         return None
     low, middle, high = np.quantile(onset, [0.1, 0.5, 0.9])
+    if high - low < 2.5:
+        return Estimate(float(middle), float(1.25 * np.std(onset) / np.sqrt(len(onset) / _SHARED)))
     # A turned or bent picture leaves blanking at different places; the raster starts at the first of them.
-    return float(middle if high - low < 2.5 else np.mean(np.sort(onset)[: max(len(onset) // 8, 4)]))
+    first = np.sort(onset)[: max(len(onset) // 8, 4)]
+    return Estimate(float(first.mean()), float(np.std(first) / np.sqrt(len(first) / _SHARED)))

@@ -61,7 +61,7 @@ def read_grid(frame: Frame, located: Located) -> Findings:
         readings = model.readings()
         for key, unit, estimate in readings:
             findings.add(key, unit, estimate, "crosshatch")
-        error, ideal = position_error(crossings, frame.raster)
+        error, ideal = position_error(crossings, frame.raster, model.shared)
         findings.add("position_error", "% of PH", error, "crosshatch")
         findings.traces["grid"] = GridTrace(
             crossings.index, ideal, crossings.found, model.left_over, model.parts(readings)
@@ -141,15 +141,25 @@ class Axis:
 
     def spread(self, gradient: Array) -> float:
         """Standard deviation of a quantity with this gradient by all coefficients."""
-        return float(np.sqrt(max(gradient @ self.covariance @ gradient, 0.0)))
+        return max(float(gradient @ self.covariance @ gradient), 0.0) ** 0.5
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Geometry:
-    """Models of x (0) and y (1), and what they leave over, samples and lines, (n, 2)."""
+    """Models of x (0) and y (1).
+
+    Attributes
+    ----------
+    left_over : (n, 2) array
+        What they do not explain, samples and lines.
+    shared : (float, float)
+        Standard deviation of what all crossings of a row share along the line (jitter), and all of a column
+        down the frame; samples and lines.
+    """
 
     axes: tuple[Axis, Axis]
     left_over: Array
+    shared: tuple[float, float]
 
     def trapezoid(self, axis: int) -> Estimate:
         """Size at the end less size at the start of the other coordinate, % of the mean."""
@@ -253,19 +263,37 @@ def fit_geometry(crossings: Crossings, raster: Raster) -> Geometry:
     half = np.array([raster.width_samples, raster.height_lines]) / 2
     seen = (crossings.found - [raster.left, raster.top]) / half - 1.0
     u, v = (2.0 * crossings.xy - 1.0).T
-    axes, left = [], []
+    axes: list[Axis] = []
+    left: list[Array] = []
+    shared: list[float] = []
     for axis, (own, other) in enumerate(((u, v), (v, u))):
         here = seen[:, axis]
         design = np.concatenate([_terms(own, other), -np.stack([here**k for k in _SWEEP], 1)], 1)
         weights = half[axis] / np.maximum(crossings.sigma[:, axis], 1e-3)
         solved, *_ = np.linalg.lstsq(design * weights[:, None], here * weights, rcond=None)
         inverse = np.linalg.inv((design * weights[:, None] ** 2).T @ design)
-        axes.append(Axis(solved[: len(_TERMS)], solved[len(_TERMS) :], inverse))
         left.append((here - design @ solved) * half[axis])
-    return Geometry((axes[0], axes[1]), np.stack(left, 1))
+        lines = crossings.index[:, 1 - axis]
+        shared.append(_shared(left[-1], crossings.sigma[:, axis], lines))
+        pull = inverse @ (design * weights[:, None] ** 2).T
+        together = np.stack([pull[:, lines == line].sum(1) for line in np.unique(lines)], 1)
+        covariance = inverse + (shared[-1] / half[axis]) ** 2 * (together @ together.T)
+        axes.append(Axis(solved[: len(_TERMS)], solved[len(_TERMS) :], covariance))
+    return Geometry((axes[0], axes[1]), np.stack(left, 1), (shared[0], shared[1]))
 
 
-def position_error(crossings: Crossings, raster: Raster) -> tuple[Estimate, Array]:
+def _shared(left: Array, sigma: Array, lines: Array) -> float:
+    """Standard deviation of what the crossings of one grid line share, beyond their own noise."""
+    kinds = np.unique(lines)
+    means = np.array([left[lines == kind].mean() for kind in kinds])
+    own = np.array([(sigma[lines == kind] ** 2).mean() / np.count_nonzero(lines == kind) for kind in kinds])
+    freedom = max(len(kinds) - 3, 1)  # the model takes place, lean and bend of the line means away
+    return float(np.sqrt(max(float((means**2).sum()) / freedom - float(own.mean()), 0.0)))
+
+
+def position_error(
+    crossings: Crossings, raster: Raster, shared: tuple[float, float] = (0.0, 0.0)
+) -> tuple[Estimate, Array]:
     """Largest distance of a crossing from the best-fitting ideal grid, shift, turn and both sizes free.
 
     Returns
@@ -290,7 +318,9 @@ def position_error(crossings: Crossings, raster: Raster) -> tuple[Estimate, Arra
     ideal = (design @ solved).reshape(2, -1).T
     distance = np.hypot(*(seen - ideal).T)
     worst = int(distance.argmax())
-    sigma = float(np.hypot(*(crossings.sigma[worst] / scale)) / np.sqrt(2.0))
+    # Only what lies along the error counts.
+    along = (seen - ideal)[worst] / max(float(distance[worst]), 1e-9)
+    sigma = float(np.hypot(*(along * np.hypot(crossings.sigma[worst], shared) / scale)))
     return Estimate(100.0 * float(distance[worst]), 100.0 * sigma), ideal * scale + [raster.left, raster.top]
 
 
