@@ -8,7 +8,6 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from patternscore.errors import UnscorableFrame
 from patternscore.standard import Levels, Raster, Standard, ire_from_code
 
 
@@ -103,19 +102,3 @@ def frame_from_codes(
         code_floor=float(ire_from_code(0.0, levels, bits)),
         code_ceiling=float(ire_from_code(top, levels, bits)),
     )
-
-
-def average(frames: list[Frame]) -> Frame:
-    """Mean of several grabs of one picture; all must agree in size, standard and clock."""
-    first = frames[0]
-    for other in frames[1:]:
-        if other.luma.shape != first.luma.shape or other.sample_rate != first.sample_rate:
-            raise UnscorableFrame(
-                f"{other.name}: {other.samples} x {other.rows} cannot be averaged with {first.name}, "
-                f"{first.samples} x {first.rows}; give frames of one size"
-            )
-    total = np.zeros(first.luma.shape, dtype=np.float64)
-    for frame in frames:
-        total += frame.luma
-    count = sum(frame.averaged for frame in frames)
-    return first.with_luma(total / len(frames), averaged=count)

@@ -8,9 +8,10 @@ from typing import Any
 
 import numpy as np
 
+from patternscore.averaging import average
 from patternscore.card import Card, make_card
 from patternscore.errors import Unreadable
-from patternscore.frame import Frame, average
+from patternscore.frame import Frame
 from patternscore.keys import keys_of
 from patternscore.layout import chart_plan
 from patternscore.limits import Limits, shipped_limits

@@ -7,8 +7,8 @@ import pytest
 from levels_by_hand import chart_levels, coded, laid, readings, uncoded
 from scipy.signal import convolve2d
 
+from patternscore.averaging import average
 from patternscore.chain import Chain, grab, responses
-from patternscore.frame import average
 from patternscore.layout import GROUND, chart_plan
 from patternscore.locate import locate
 from patternscore.measure.ground import line_seconds
