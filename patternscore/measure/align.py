@@ -160,7 +160,7 @@ def _robust_run(shift: Array, basis: Array) -> Array:
 def _inside(strip: Strip) -> None:
     """Drop rows whose windows reach beyond the frame."""
     low = strip.position.min(axis=0) - strip.left > 0
-    high = strip.position.max(axis=0) + strip.right + 1 < strip.luma.shape[1] - 1
+    high = strip.position.max(axis=0) + strip.right + 1 < strip.length - 1
     keep = low & high
     if np.count_nonzero(keep) < FEWEST:
         raise Unreadable("the edge lies too near the side of the frame")

@@ -103,7 +103,7 @@ def _fit(pile: Pile, shelf: _Shelf, gain: Complex) -> Response:
     spot = float(SPOTS[_nearest(pile, shelf)])
     weight = np.sqrt(np.where(sound, 1.0 / np.maximum((1.0 / np.maximum(pile.count, 1.0)).mean(axis=0), 1e-9), 0.0))
     weight *= np.sqrt(len(pile.count)) / max(pile.noise, 1e-3)
-    for _ in range(3):
+    for _ in range(2):
         model, change, rate = _between(shelf, spot)
         columns = np.stack([change, model, rate, np.ones_like(model)]) * weight
         normal = columns @ columns.T
@@ -121,8 +121,9 @@ def _fit(pile: Pile, shelf: _Shelf, gain: Complex) -> Response:
         covariance=np.array([[variance]]),
         theta=np.array([spot]),
         step=float(solved[1]),
-        model=model[None],
         chi2=chi2,
+        drift=solved[2:],
+        outer=np.zeros((0, 1, len(model))),
     )
 
 

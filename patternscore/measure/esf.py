@@ -53,8 +53,8 @@ class TransferCurve:
         part = (self.gain[k - 1] - level) / drop
         step = self.frequency[k] - self.frequency[k - 1]
         # The slope over a few points, as noise may flatten it between two.
-        wide = slice(max(k - 3, 0), k + 3)
-        slope = np.polyfit(self.frequency[wide], self.gain[wide], 1)[0]
+        low, high = max(k - 3, 0), min(k + 2, len(self.gain) - 1)
+        slope = (self.gain[high] - self.gain[low]) / (self.frequency[high] - self.frequency[low])
         sigma = self._sigma_at(k, part) / max(abs(float(slope)), 1e-6)
         return Estimate(float(self.frequency[k - 1] + part * step), sigma)
 
@@ -111,7 +111,7 @@ def transfer_curve(response: Response, sample_rate: float, known: Array | None =
     if known is not None:
         gain, slopes = gain / known, slopes / known
     covariance = response.covariance * max(response.chi2, 1.0)
-    sigma = np.sqrt(np.maximum(np.einsum("pn,pq,qn->n", slopes, covariance, slopes, optimize=True), 0.0))
+    sigma = np.sqrt(np.maximum(((covariance @ slopes) * slopes).sum(axis=0), 0.0))
     return TransferCurve(response.nu * sample_rate, gain, sigma, slopes, covariance)
 
 
@@ -180,12 +180,14 @@ class EdgeSpread:
     def _passes(self, k: int, level: float) -> tuple[float, float]:
         """Time in us at which the level passes, after bin k, and the rate there (per us): a cubic through four bins."""
         y = self.levels[k - 1 : k + 3]
-        curve = np.polyfit([-1.0, 0.0, 1.0, 2.0], y, 3)
+        c2 = (y[0] - 2.0 * y[1] + y[2]) / 2.0
+        c3 = (y[3] - 3.0 * y[2] + 3.0 * y[1] - y[0]) / 6.0
+        c1 = (y[2] - y[0]) / 2.0 - c3
         part = (level - y[1]) / (y[2] - y[1])
         for _ in range(4):
-            part -= (np.polyval(curve, part) - level) / np.polyval(np.polyder(curve), part)
-        rate = np.polyval(np.polyder(curve), part) / self._step_us()
-        return float(self.times[k] + part * self._step_us()), float(rate)
+            rate = c1 + part * (2.0 * c2 + 3.0 * c3 * part)
+            part -= (y[1] + part * (c1 + part * (c2 + c3 * part)) - level) / rate
+        return float(self.times[k] + part * self._step_us()), float(rate) / self._step_us()
 
     def overshoot(self) -> Estimate:
         """How far the level passes beyond the step after the edge, percent of the step."""

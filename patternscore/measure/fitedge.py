@@ -13,7 +13,7 @@ from patternscore.measure.align import Alignment, refine, settle
 from patternscore.measure.design import design, lay_out
 from patternscore.measure.family import Family, Start, around, nearest, pole_frequency
 from patternscore.measure.profile import Pile, Run, Strip, coding_of, cut_strip, pile_up
-from patternscore.measure.response import Response, fit
+from patternscore.measure.response import Response, fit, modelled
 from patternscore.measure.stepbasis import BINS, edge_of
 from patternscore.reading import Estimate
 
@@ -81,7 +81,7 @@ def fit_edges(frame: Frame, blocks: list[list[Run]], *, across: bool) -> FittedE
     Edges are first brought into step by their areas, then by the nearest of a library of profiles. Where the
     code is coarse against the noise, or the fit leaves too much, it is done again with what has been learnt.
     """
-    strips = _strips(frame, blocks, across=across)
+    strips = _strips(frame, blocks)
     coding = coding_of(frame)
     scale = float(np.mean(np.concatenate([strip.step for strip in strips])))
     pile = pile_up(strips, coding)
@@ -96,15 +96,16 @@ def fit_edges(frame: Frame, blocks: list[list[Run]], *, across: bool) -> FittedE
     posed = design(layout, pile, coding.step / scale, coding.left_by_noise)
     taps = _taps(strips[0], across=across)
     rounds = ROUNDS_ACROSS if across else ROUNDS
-    response = fit(posed, family, taps, own=not across)
+    response = fit(posed, family, taps)
     for _ in range(rounds - 1):
         if response.chi2 < MISFIT:
             break
-        alignment = _refine(strips, response.model, jitter=not across)
-        pile = pile_up(strips, coding, response.model)
+        model = modelled(response, layout)
+        alignment = _refine(strips, model, jitter=not across)
+        pile = pile_up(strips, coding, model)
         layout = lay_out(strips, pile, neighbours=not across)
         posed = design(layout, pile, coding.step / scale, coding.left_by_noise, posed)
-        response = fit(posed, _again(family, response), taps, own=not across)
+        response = fit(posed, _again(family, response), taps)
     poles = None if across else _poles(response, start.scale)
     return FittedEdge(tuple(strips), pile, alignment, response, poles, _slant(strips))
 
@@ -118,13 +119,12 @@ def _poles(response: Response, scale: float) -> Estimate | None:
     return Estimate(value, float(np.sqrt(max(slopes @ covariance @ slopes, 0.0))))
 
 
-def _strips(frame: Frame, blocks: list[list[Run]], *, across: bool) -> list[Strip]:
+def _strips(frame: Frame, blocks: list[list[Run]]) -> list[Strip]:
     """Strips of the blocks that can be read, all with the same window."""
     strips, reason = [], "the pattern has no edge for it"
-    transposed = np.ascontiguousarray(frame.luma.T) if across else None
     for runs in blocks:
         try:
-            strip = cut_strip(frame, runs, transposed)
+            strip = cut_strip(frame, runs)
             settle(strip)
             strips.append(strip)
         except Unreadable as failed:

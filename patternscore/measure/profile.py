@@ -37,7 +37,9 @@ class Strip:
     Attributes
     ----------
     luma : (lines, samples) float32
-        The frame, or its transpose.
+        The frame.
+    across : bool
+        Whether rows are columns of the frame.
     rows : (n,) int
         Rows that cross all edges.
     position : (edges, n) float64
@@ -59,6 +61,7 @@ class Strip:
     """
 
     luma: Single
+    across: bool
     rows: npt.NDArray[np.int64]
     position: Array
     left: int
@@ -72,13 +75,23 @@ class Strip:
     start: npt.NDArray[np.int64] = field(default_factory=lambda: np.zeros((1, 1), dtype=np.int64))
     levels: Single = field(default_factory=lambda: np.zeros((1, 1, 1), dtype=np.float32))
 
+    @property
+    def length(self) -> int:
+        """Samples of a row."""
+        return int(self.luma.shape[0 if self.across else 1])
+
     def cut(self) -> None:
         """Cut the windows about the present positions; small moves later on need no new cut."""
         self.start = np.floor(self.position).astype(np.int64) - self.left
         columns = self.start[..., None] + np.arange(self.left + self.right + 2)
-        np.clip(columns, 0, self.luma.shape[1] - 1, out=columns)
-        columns += (self.rows * self.luma.shape[1])[:, None]
-        self.levels = self.luma.ravel()[columns]
+        np.clip(columns, 0, self.length - 1, out=columns)
+        samples = self.luma.shape[1]
+        if self.across:
+            columns *= samples
+            columns += self.rows[:, None]
+        else:
+            columns += (self.rows * samples)[:, None]
+        self.levels = np.take(self.luma, columns)
         self.shifts = np.zeros(len(self.rows))
 
     def narrow(self, left: int, right: int) -> None:
@@ -377,15 +390,13 @@ def _run(edge: Edge, place: Array) -> Run:
     return Run(edge, low, high, curve, float(along[4] - along[5]), float(along[6] - along[4]))
 
 
-def cut_strip(frame: Frame, runs: list[Run], transposed: Single | None = None) -> Strip:
+def cut_strip(frame: Frame, runs: list[Run]) -> Strip:
     """Lay out the windows of one block's edges.
 
     Parameters
     ----------
     runs : list of Run
         The edges of the block.
-    transposed : (samples, rows) float32, optional
-        The frame's levels transposed, if at hand; for edges across the lines.
 
     Raises
     ------
@@ -393,11 +404,9 @@ def cut_strip(frame: Frame, runs: list[Run], transposed: Single | None = None) -
         If the block is cut off by the frame or too short.
     """
     axis = runs[0].edge.axis
-    luma = frame.luma
-    if axis == "v":
-        luma = np.ascontiguousarray(frame.luma.T) if transposed is None else transposed
+    count, length = frame.luma.shape if axis == "h" else frame.luma.shape[::-1]
     low = max(max(run.low for run in runs) + END[axis], 0.0)
-    high = min(min(run.high for run in runs) - END[axis], luma.shape[0] - 1.0)
+    high = min(min(run.high for run in runs) - END[axis], count - 1.0)
     rows = np.arange(int(np.ceil(low)), int(np.floor(high)) + 1)
     if len(rows) < FEWEST:
         raise Unreadable("the edge does not cross enough of the frame")
@@ -407,8 +416,15 @@ def cut_strip(frame: Frame, runs: list[Run], transposed: Single | None = None) -
     before, after = min([runs[0].before - MARGIN, *gaps]), min([runs[-1].after - MARGIN, *gaps])
     if min(before, after) < SHORTEST:
         raise Unreadable("too little of the pattern is clear beside the edge")
-    inside = (position[0] - before > 0) & (position[-1] + after < luma.shape[1] - 1)
+    inside = (position[0] - before > 0) & (position[-1] + after < length - 1)
     if np.count_nonzero(inside) < FEWEST:
         raise Unreadable("the edge lies too near the side of the frame")
     longest = LONGEST[axis]
-    return Strip(luma, rows[inside], position[:, inside], int(min(before, longest)), int(min(after, longest)))
+    return Strip(
+        np.ascontiguousarray(frame.luma),
+        axis == "v",
+        rows[inside],
+        position[:, inside],
+        int(min(before, longest)),
+        int(min(after, longest)),
+    )

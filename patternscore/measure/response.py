@@ -7,14 +7,14 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from patternscore.measure.design import Design
+from patternscore.measure.design import Design, Layout
 from patternscore.measure.family import Family
 from patternscore.measure.stepbasis import BINS, edge_of, step_basis
 
 Array = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
 
-TAP_DECAYS = (2.0, 6.0, 20.0)  # samples over which echoes may die away
+TAP_DECAYS = (2.0, 20.0)  # samples over which echoes may die away
 TAP_LEVELS = tuple(10.0**power for power in np.arange(-4.0, -0.4, 0.5))
 STEP_PRIOR = 0.1  # how far the step may be from the difference of the plateaus, fraction
 ROUGH = 0.0015  # fraction of the step within which the family alone need not follow a profile
@@ -38,10 +38,10 @@ class Response:
         Parameters of the member of the family that it was built on.
     step : float
         Height of the step in units of the profile.
-    model : (edges, bins) float64
-        Modelled profiles.
     chi2 : float
         Misfit of the profiles per degree of freedom.
+    drift, outer : (k,) and (m, edges, bins) float64
+        Values of what else was found in the profiles; its last m belong to steps beyond the clear part.
     """
 
     nu: Array
@@ -50,9 +50,9 @@ class Response:
     covariance: Array
     theta: Array
     step: float
-    model: Array
     chi2: float
-    hyper: tuple[float, ...] = ()
+    drift: Array
+    outer: Array
 
 
 def fit(
@@ -62,7 +62,6 @@ def fit(
     *,
     levels: tuple[float, ...] = TAP_LEVELS,
     decays: tuple[float, ...] = TAP_DECAYS,
-    own: bool = True,
     steps: int = 12,
 ) -> Response:
     """Fit a family, then what the family leaves.
@@ -73,8 +72,6 @@ def fit(
         Echoes that may correct the family, bins later than the edge.
     levels, decays : tuple of float
         Prior sigmas of the echoes to choose from, and samples over which they die away.
-    own : bool
-        Whether echoes of the family's own edge are tried beside those of a sharp one.
     steps : int
         Most steps that the family is given.
     """
@@ -83,10 +80,7 @@ def fit(
     side = np.vstack([design.nuisance, layout.rows_of(columns)])
     prior = np.concatenate([family.prior, [STEP_PRIOR], design.allowed, allowed])
     theta, step = _family(design, family, side, prior, steps)
-    wide = _wide(step_basis().nu)
-    bases: tuple[Complex | None, ...] = (None, wide) if own else (wide,)
-    found = _with_echoes(design, family, theta, step, side, prior, taps, bases, levels, decays)
-    return _finished(design, found, columns)
+    return _with_echoes(design, family, theta, step, side, prior, taps, levels, decays, columns)
 
 
 def _project(design: Design, spectra: Complex) -> Array:
@@ -133,23 +127,9 @@ def _family(design: Design, family: Family, side: Array, prior: Array, steps: in
         theta, extra = trial, extra + move[count:]
         columns, rest, pull, cost = new
         damping = max(damping * 0.1, 1e-9)
-        if gained < max(0.02, 1e-4 * cost):
+        if gained < max(0.3, 1e-3 * cost):
             break
     return theta, float(extra[0])
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class _Corrected:
-    """A member of a family with its correction, and the values of the nuisance."""
-
-    theta: Array
-    gain: Complex
-    slopes: Complex
-    covariance: Array
-    step: float
-    drift: Array
-    chi2: float
-    hyper: tuple[float, ...]
 
 
 def _with_echoes(
@@ -160,17 +140,15 @@ def _with_echoes(
     side: Array,
     prior: Array,
     taps: npt.NDArray[np.int64],
-    bases: tuple[Complex | None, ...],
     levels: tuple[float, ...],
     decays: tuple[float, ...],
-) -> _Corrected:
+    outer: Array,
+) -> Response:
     """Correct a member of the family by echoes, as strong as the profile calls for.
 
-    Any response is the family's plus a transversal filter on an edge of known shape: the family's own, which
-    lets in no more noise than the response does, or a wide one, which can mend what the family cuts off. The
-    taps are unknown with a prior that dies away from the edge; how strong, how long and of which edge is
-    taken where the profile is most probable (marginal likelihood), so that clean profiles are followed
-    exactly and noisy ones kept to the family.
+    Any response is the family's plus a transversal filter on a sharp edge. The taps are unknown with a prior
+    that dies away from the edge; how strong and how long is taken where the profile is most probable (marginal
+    likelihood), so that clean profiles are followed exactly and noisy ones kept to the family.
     """
     gain, slopes = family.shape(theta)
     parts = _project(design, np.vstack([gain[None], slopes]))
@@ -183,48 +161,41 @@ def _with_echoes(
     pull[count] = step - 1.0
     allowed = np.concatenate([prior[:families], np.zeros(len(taps)), prior[families:]])
     layout, pad = design.layout, int(np.abs(taps).max())
-    best = None
-    for base in bases:
-        spread = edge_of(gain if base is None else base, layout.reach(pad))
-        moved = layout.rows_moved(layout.profiles(spread, pad), np.append(taps, 0), pad)
-        echoes = (moved[:-1] - moved[-1]) * design.weight
-        columns = np.vstack([fixed[:families], echoes, fixed[families:]])
-        normal, right = columns @ columns.T, columns @ rest
-        tried = _most_probable(normal, right, allowed, pull, slice(families, count), taps, levels, decays)
-        if best is None or tried[0] > best[0][0]:
-            best = tried, base, columns, normal, right
-    assert best is not None
-    (_, level, decay), base, columns, normal, right = best
+    wide = _wide(step_basis().nu)
+    moved = layout.rows_moved(layout.profiles(edge_of(wide, layout.reach(pad)), pad), np.append(taps, 0), pad)
+    echoes = (moved[:-1] - moved[-1]) * design.weight
+    columns = np.vstack([fixed[:families], echoes, fixed[families:]])
+    normal, right = columns @ columns.T, columns @ rest
+    level, decay = _most_probable(normal, right, allowed, pull, slice(families, count), taps, levels, decays)
     allowed[families:count] = level * np.exp(-np.abs(taps / BINS) / decay)
     solved, factor = _solve(normal, right, allowed, pull)
-    hyper = (level, decay, float(base is not None))
     later = np.exp(-2j * np.pi * np.outer(taps / BINS, step_basis().nu)) - 1.0
-    slopes = np.vstack([slopes, (gain if base is None else base) * later])
+    slopes = np.vstack([slopes, wide * later])
     inverse = np.linalg.inv(factor) * allowed
     step = step + float(solved[count])
     after = rest - solved @ columns
     used = max(np.count_nonzero(design.weight) - families - 2, 1)
-    return _Corrected(
-        theta=theta,
+    return Response(
+        nu=step_basis().nu,
         gain=gain + solved[:count] @ slopes / step,
         slopes=slopes,
         covariance=(inverse.T @ inverse)[:count, :count] / step**2,
+        theta=theta,
         step=step,
-        drift=solved[count + 1 :],
         chi2=float(after @ after) / used,
-        hyper=hyper,
+        drift=solved[count + 1 :],
+        outer=outer,
     )
 
 
-def _finished(design: Design, found: _Corrected, outer: Array) -> Response:
-    """Add the modelled profiles."""
-    own, layout, drift = len(design.allowed), design.layout, found.drift
-    model = found.step * layout.profiles(edge_of(found.gain, layout.reach(0))) + np.tensordot(drift[own:], outer, 1)
-    model += (drift[2 : own - 1] + drift[own - 1] * layout.signs)[:, None]
-    return Response(
-        step_basis().nu, found.gain, found.slopes, found.covariance, found.theta, found.step, model, found.chi2,
-        found.hyper,
-    )  # fmt: skip
+def modelled(response: Response, layout: Layout) -> Array:
+    """Profiles that a fitted response makes, with the offsets and what lies beyond: (edges, bins)."""
+    edge = edge_of(response.gain, layout.reach(0))
+    model = response.step * layout.profiles(edge)
+    own = len(response.drift) - len(response.outer)
+    model += np.tensordot(response.drift[own:], response.outer, 1)
+    model += (response.drift[2 : own - 1] + response.drift[own - 1] * layout.signs)[:, None]
+    return np.asarray(model)
 
 
 def _wide(nu: Array) -> Complex:
@@ -241,8 +212,8 @@ def _most_probable(
     taps: npt.NDArray[np.int64],
     levels: tuple[float, ...],
     decays: tuple[float, ...],
-) -> tuple[float, float, float]:
-    """Log of the marginal likelihood up to a constant, level and decay of the echoes where it is largest.
+) -> tuple[float, float]:
+    """Level and decay of the echoes where the marginal likelihood is largest.
 
     All but the echoes is eliminated first; then the eigenvalues for one decay serve every level.
     """
@@ -263,8 +234,7 @@ def _most_probable(
     grown = 1.0 + size * np.maximum(values, 0.0)
     evidence = (size * seen / grown - np.log(grown)).sum(axis=2) / 2.0
     at = np.unravel_index(int(np.argmax(evidence)), evidence.shape)
-    common = float(target @ solved[:, -1] - np.linalg.slogdet(inner)[1]) / 2.0
-    return float(evidence[at]) + common, float(levels[at[0]]), float(decays[at[1]])
+    return float(levels[at[0]]), float(decays[at[1]])
 
 
 def _solve(normal: Array, right: Array, allowed: Array, pull: Array) -> tuple[Array, Array]:

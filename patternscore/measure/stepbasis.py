@@ -74,9 +74,9 @@ def _frequencies() -> Array:
         [
             np.arange(0.0, 0.16, 0.002),
             np.arange(0.16, 0.56, 0.004),
-            np.arange(0.56, 1.0, 0.02),
-            np.arange(1.0, 2.0, 0.05),
-            np.geomspace(2.0, 16.0, 12),
+            np.arange(0.56, 1.0, 0.04),
+            np.arange(1.0, 2.0, 0.1),
+            np.geomspace(2.0, 16.0, 8),
         ]
     )
 
