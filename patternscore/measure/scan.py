@@ -84,9 +84,9 @@ def _blanking(findings: Findings, frame: Frame, located: Located) -> None:
         "blank_left": None if located.edges.left is None else located.edges.left + half,
         "blank_right": None if located.edges.right is None else frame.samples - half - located.edges.right,
     }
-    for key, samples in seen.items():
+    for (key, samples), sigma in zip(seen.items(), located.edges.sigmas, strict=False):
         value = 0.0 if samples is None else max(samples, 0.0)
-        findings.add(key, "us", Estimate(value / frame.sample_rate, 0.03 / frame.sample_rate), "edge")
+        findings.add(key, "us", Estimate(value / frame.sample_rate, sigma / frame.sample_rate), "edge")
 
 
 def _read_axis(findings: Findings, frame: Frame, located: Located, axis: Axis, shape: StepShape | None) -> None:
@@ -97,7 +97,7 @@ def _read_axis(findings: Findings, frame: Frame, located: Located, axis: Axis, s
     try:
         if not bars:
             raise Unreadable(reasons[0])
-        scan = fit_scan(bars)
+        scan = fit_scan(bars, located.crossings)
     except Unreadable as reason:
         findings.miss(reason.reason, *keys[:-2])
         _size_from_crosshatch(findings, located, axis, nominal)
@@ -112,7 +112,7 @@ def _read_axis(findings: Findings, frame: Frame, located: Located, axis: Axis, s
     span = (starts[0], starts[1])
     if any(fold.length.value > 0 for fold in folds.values()):
         bars = [_between(one, span) for one in bars]
-        scan = fit_scan(bars)
+        scan = fit_scan(bars, located.crossings)
     findings.traces[f"scan_{axis}"] = Scan(scan, tuple(bars), span, nominal, folds)
     _speeds(findings, scan, span)
     _size(findings, scan, nominal)

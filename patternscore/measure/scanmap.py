@@ -14,6 +14,7 @@ import numpy as np
 import numpy.typing as npt
 
 from patternscore.errors import Unreadable
+from patternscore.located import Crossings
 from patternscore.measure.ruler import Axis, Bars
 from patternscore.reading import Estimate
 
@@ -22,7 +23,12 @@ PIECES = {"h": 20, "v": 15}  # spline pieces across the picture
 CELLS = {"h": 16, "v": 12}  # what "local" means for linearity
 ASTRAY = 0.6  # samples or lines: no edge nearer to the curve than this is left out
 SIDE_TERMS = 4
-BENDS = ((3, 1.0), (4, 0.1))  # samples or lines: what third and fourth differences of the spline come to
+LINE_DOUBT = 0.2  # lines: doubt of a thin line sampled without a filter
+# Samples or lines: what third and fourth differences of the spline may come to, and what they usually do: the
+# latter is called for where edges are known to a part of a line only.
+BENDS = ((3, 1.0), (4, 0.1))
+USUAL_BENDS = ((3, 0.25), (4, 0.02))
+VAGUE = 0.1  # samples or lines: doubt of most edges from which on that is so
 CLEAN = 0.005  # samples or lines: error of a bar edge that even a clean picture has
 MARGIN = 0.08  # picture fraction beyond the edges that the curve may be asked for
 
@@ -110,23 +116,65 @@ def _design(x: Array, side: Array, axis: Axis) -> Array:
 
 
 @lru_cache
-def _penalty(axis: Axis) -> Array:
-    """Weights on the spline's third and fourth differences."""
+def _penalty(axis: Axis, vague: bool, rulers: int) -> Array:
+    """Weights on the spline's differences, and on what nothing tells: sides of one ruler, an unseen bow."""
     size = PIECES[axis] + 3
-    penalty = np.zeros((size + SIDE_TERMS + 1, size + SIDE_TERMS + 1))
-    for order, usual in BENDS:
+    penalty = np.diag(np.repeat([0.0, 0.0 if rulers > 1 else 1.0, 0.0, 1e-2], [size, SIDE_TERMS, 1, 1]))
+    for order, usual in USUAL_BENDS if vague else BENDS:
         rough = np.diff(np.eye(size), order, axis=0) / usual
         penalty[:size, :size] += rough.T @ rough
     return penalty
 
 
-def fit_scan(bars: list[Bars]) -> ScanMap:
+@dataclass(frozen=True, slots=True, eq=False)
+class _Marks:
+    """Marks to draw the curve through: design, frame coordinate, error and whether each is good."""
+
+    design: Array
+    place: Array
+    error: Array
+    good: npt.NDArray[np.bool_]
+
+
+def _of_crosshatch(crossings: Crossings, axis: Axis, middle: float) -> _Marks:
+    """Crosshatch crossings as marks: they share rows (columns), so that each counts for a part of one."""
+    along = 0 if axis == "h" else 1
+    at, side = crossings.xy[:, along], (crossings.xy[:, 1 - along] - 0.5) / middle
+    _, row, count = np.unique(crossings.index[:, along], return_inverse=True, return_counts=True)
+    design = np.concatenate([_design(at, side, axis), np.zeros((at.size, 1)), _bow(at, side)], axis=1)
+    error = np.sqrt((LINE_DOUBT**2 + crossings.sigma[:, along] ** 2) * count[row])
+    return _Marks(design, crossings.found[:, along], error, np.ones(at.size, dtype=bool))
+
+
+def _bow(at: Array, side: Array) -> Array:
+    """Bulge of the picture's middle against its sides, (n, 1)."""
+    return np.asarray(((2.0 * at - 1.0) * (1.0 - side**2))[:, None])
+
+
+def _of_rulers(bars: list[Bars], axis: Axis, spread: float) -> _Marks:
+    """Bar edges as marks, each with its error from noise and doubt."""
+    at = np.concatenate([one.at for one in bars])
+    sides = np.concatenate([np.full(one.at.size, np.sign(one.strip.across - 0.5)) for one in bars])
+    parts = [_design(at, sides if len(bars) > 1 else 0.0 * sides, axis)]
+    parts += [np.concatenate([one.sign for one in bars])[:, None], np.zeros((at.size, 1))]
+    doubt = np.concatenate([one.doubt for one in bars])
+    return _Marks(
+        np.concatenate(parts, axis=1),
+        np.concatenate([one.place for one in bars]),
+        np.sqrt(doubt**2 + spread**2 + CLEAN**2),
+        np.concatenate([one.good for one in bars]),
+    )
+
+
+def fit_scan(bars: list[Bars], crossings: Crossings | None = None) -> ScanMap:
     """Fit the scan through the bar edges of the rulers of one direction.
 
     Parameters
     ----------
     bars : list of Bars
         One or two rulers of one direction.
+    crossings : Crossings, optional
+        Of the crosshatch, which help out where bar edges are known to a part of a line only.
 
     Raises
     ------
@@ -134,49 +182,56 @@ def fit_scan(bars: list[Bars]) -> ScanMap:
         If fewer edges agree than half the rulers' range needs.
     """
     axis = bars[0].strip.axis
-    at = np.concatenate([one.at for one in bars])
-    place = np.concatenate([one.place for one in bars])
-    good = np.concatenate([one.good for one in bars])
-    doubt = np.concatenate([one.doubt for one in bars])
-    sides = np.concatenate([np.full(one.at.size, np.sign(one.strip.across - 0.5)) for one in bars])
-    design = _design(at, sides if len(bars) > 1 else np.zeros(at.size), axis)
-    design = np.concatenate([design, np.concatenate([one.sign for one in bars])[:, None]], axis=1)
-    penalty = _penalty(axis)
-    if len(bars) == 1:
-        penalty = penalty.copy()
-        penalty[np.diag_indices(penalty.shape[0])] += np.repeat([0.0, 1.0, 0.0], [PIECES[axis] + 3, SIDE_TERMS, 1])
-    # An edge's error: what noise does to it, measured between halves of the bands, and its doubt.
     parts = [one.noise[one.good] for one in bars]
+    # An edge's error: what noise does to it, measured between halves of the bands, and its doubt.
     spread = float(np.sqrt(np.mean(np.concatenate([part - part.mean() for part in parts]) ** 2)))
     common = float(np.sqrt(np.mean([part.mean() ** 2 for part in parts]) / len(parts)))
-    error = np.sqrt(doubt**2 + spread**2 + CLEAN**2)
-    used = good
+    marks = _of_rulers(bars, axis, spread)
+    vague = bool(np.median(marks.error) > VAGUE)
+    count = marks.place.size
+    if vague and crossings is not None:
+        more = _of_crosshatch(crossings, axis, abs(bars[0].strip.across - 0.5))
+        joined = zip(
+            (marks.design, marks.place, marks.error, marks.good),
+            (more.design, more.place, more.error, more.good),
+            strict=True,
+        )
+        marks = _Marks(*(np.concatenate(pair) for pair in joined))
+    coefficients, gain, left, used = _draw(marks, _penalty(axis, vague, len(bars)))
+    on_rulers = np.flatnonzero(used[:count])
+    if on_rulers.size < 10:
+        raise Unreadable("the bars of the rulers do not run in a smooth scan")
+    at = np.concatenate([one.at for one in bars])[on_rulers]
+    return ScanMap(
+        axis,
+        coefficients[:-2],
+        float(coefficients[-2]),
+        (gain[:, :count] @ gain[:, :count].T)[:-2, :-2],
+        spread,
+        common,
+        at,
+        marks.place[on_rulers],
+        left[on_rulers],
+        float(at.min()),
+        float(at.max()),
+    )
+
+
+def _draw(marks: _Marks, penalty: Array) -> tuple[Array, Array, Array, npt.NDArray[np.bool_]]:
+    """Draw the curve and leave out marks far from it: coefficients, their slopes by the marks, departures, use."""
+    used = marks.good
     for _ in range(3):
-        weighted = design * (used / error**2)[:, None]
-        inverse = np.linalg.inv(weighted.T @ design + penalty)
-        coefficients = inverse @ (weighted.T @ place)
-        left = (place - design @ coefficients) / error
-        limit = max(5.0 * float(np.median(np.abs(left[used]))), 4.0)
-        fresh = good & ((np.abs(left) < limit) | (np.abs(left * error) < ASTRAY))
+        weighted = marks.design * (used / marks.error**2)[:, None]
+        inverse = np.linalg.inv(weighted.T @ marks.design + penalty)
+        coefficients = inverse @ (weighted.T @ marks.place)
+        left = marks.place - marks.design @ coefficients
+        off = np.abs(left) / marks.error
+        limit = max(5.0 * float(np.median(off[used])), 4.0)
+        fresh = marks.good & ((off < limit) | (np.abs(left) < ASTRAY))
         if np.array_equal(fresh, used):
             break
         used = fresh
-    if used.sum() < 10:
-        raise Unreadable("the bars of the rulers do not run in a smooth scan")
-    gain = inverse @ weighted.T
-    return ScanMap(
-        axis,
-        coefficients[:-1],
-        float(coefficients[-1]),
-        (gain @ gain.T)[:-1, :-1],
-        spread,
-        common,
-        at[used],
-        place[used],
-        (left * error)[used],
-        float(at[used].min()),
-        float(at[used].max()),
-    )
+    return coefficients, inverse @ weighted.T, left, used
 
 
 def linearity(scan: ScanMap) -> Estimate:
