@@ -122,17 +122,16 @@ def _one_thread() -> None:
 def sorted_by(cards: list[Card], key: str, limits: Limits) -> list[Card]:
     """Cards in the order of a reading, best first; "score", "name" and "setting" are known too."""
     from patternscore.load import natural
-    from patternscore.settings_in_names import setting_in_name
+    from patternscore.settings_in_names import settings_in_names
 
     if key == "name":
         return sorted(cards, key=lambda card: natural(card.name))
     if key == "score":
         return sorted(cards, key=lambda card: -(card.score if card.score is not None else -1.0))
     if key == "setting":
-        settings = {card.name: setting_in_name(card.name) for card in cards}
-        return sorted(
-            cards, key=lambda card: (settings[card.name] is None, getattr(settings[card.name], "number", 0.0))
-        )
+        settings = settings_in_names([card.name for card in cards])
+        order = [(setting is None, setting.number if setting else 0.0) for setting in settings]
+        return [cards[row] for row in sorted(range(len(cards)), key=lambda row: order[row])]
     entry = KEYS[key]
     limit = limits.get(key)
 

@@ -133,7 +133,8 @@ def _tiff(data: bytes, name: str, most: int) -> Iterator[Picture]:
 
 def _common(data: bytes, name: str, most: int) -> Iterator[Picture]:
     with _opened(data, name) as picture:
-        check_size(*picture.size, name)
+        width, height = picture.size
+        check_size(width, height, name)
         if picture.mode in ("CMYK", "LAB", "HSV", "YCCK"):
             raise UnscorableFrame(f"{name}: has {picture.mode} colours, made for printing; save it as grey or RGB")
         notes = (TURNED,) if picture.getexif().get(_ORIENTATION, 1) not in (0, 1) else ()

@@ -103,7 +103,7 @@ def _own(page: Any, name: str) -> npt.NDArray[Any]:
         pixels = (pixels.astype(np.uint16) * 255 // (2**bits - 1)).astype(np.uint8)
     elif 8 < bits < 16:
         pixels = pixels << (16 - bits)
-    return np.iinfo(pixels.dtype).max - pixels if photometric == _WHITE_IS_ZERO else pixels
+    return np.asarray(np.iinfo(pixels.dtype).max - pixels) if photometric == _WHITE_IS_ZERO else pixels
 
 
 def _by_other_means(page: Any, data: bytes, number: int, name: str) -> npt.NDArray[Any]:

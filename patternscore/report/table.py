@@ -14,7 +14,7 @@ from patternscore.card import Card
 from patternscore.keys import KEYS
 from patternscore.limits import Limits
 from patternscore.report.figures import unit_text, value_text
-from patternscore.settings_in_names import setting_in_name
+from patternscore.settings_in_names import settings_in_names
 
 # What a person looks at first; of these the ones that change most are shown when room is short.
 COLUMNS = (
@@ -116,7 +116,8 @@ def comparison_view(cards: Sequence[Card], limits: Limits, width: int = 80, firs
     """
     room = max((width - 22) // _CELL, 2)
     keys = chosen_columns(cards, room, first)
-    named = max((len(_label(card)) for card in cards), default=8)
+    labels = _labels(cards)
+    named = max(map(len, labels), default=8)
     table = Table(box=None, pad_edge=False, padding=(0, 1, 0, 0))
     table.add_column(
         "frame", no_wrap=True, overflow="ellipsis", width=min(named, max(width - 7 - _CELL * len(keys), 13))
@@ -130,13 +131,17 @@ def comparison_view(cards: Sequence[Card], limits: Limits, width: int = 80, firs
     for row, card in enumerate(cards):
         score = "-" if card.score is None else f"{card.score:.0f}"
         star = "*" if len(cards) > 1 and top is not None and card.score == top else " "
-        table.add_row(_label(card), Text(score + star), *(_cell_text(column[row]) for column in columns))
+        table.add_row(labels[row], Text(score + star), *(_cell_text(column[row]) for column in columns))
     return table
 
 
-def _label(card: Card) -> str:
-    setting = setting_in_name(card.name)
-    return card.name if setting is None else f"{setting}  {card.name}"
+def _labels(cards: Sequence[Card]) -> list[str]:
+    """Row heads: the setting, where the name tells it, and the name."""
+    names = [card.name for card in cards]
+    return [
+        name if setting is None else f"{setting}  {name}"
+        for name, setting in zip(names, settings_in_names(names), strict=True)
+    ]
 
 
 def _cell_text(cell: Cell | None) -> Text:
@@ -165,8 +170,7 @@ def rows_of(cards: Sequence[Card]) -> tuple[list[str], list[list[Any]]]:
     for key in keys:
         head += [f"{key} [{KEYS[key].unit}]", f"{key} sigma"]
     rows = []
-    for card in cards:
-        setting = setting_in_name(card.name)
+    for card, setting in zip(cards, settings_in_names([card.name for card in cards]), strict=True):
         row: list[Any] = [card.name, setting.number if setting else "", setting.unit if setting else ""]
         row.append("" if card.score is None else round(card.score, 2))
         for key in keys:

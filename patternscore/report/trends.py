@@ -14,7 +14,7 @@ from patternscore.limits import Limits
 from patternscore.report.canvas import FAINT, INK, MEASURED, WRONG, dress, new_figure, save
 from patternscore.report.figures import unit_text
 from patternscore.report.table import best_of, chosen_columns
-from patternscore.settings_in_names import setting_in_name
+from patternscore.settings_in_names import settings_in_names
 
 _PANELS = 11
 
@@ -57,7 +57,7 @@ def trend_picture(cards: Sequence[Card], path: Path | str, limits: Limits) -> No
 
 def _across(cards: Sequence[Card]) -> tuple[Any, str, list[str]]:
     """Places on the x axis, its label, and tick names where frames have no common setting."""
-    settings = [setting_in_name(card.name) for card in cards]
+    settings = settings_in_names([card.name for card in cards])
     known = [setting for setting in settings if setting is not None]
     if len(known) == len(cards) and len({setting.unit for setting in known}) == 1:
         unit, knob = known[0].unit, known[0].knob or "setting"
