@@ -16,7 +16,7 @@ Array = npt.NDArray[np.float64]
 UNLEVEL = 0.1  # IRE rms between the rows that is left alone
 ALIKE = 0.15  # part of the step within which edges of one block are taken to have the same levels
 MOST_CUTS = 3  # windows are cut again while they were off by more than this many samples:
-CLOSE = 1.0
+CLOSE = 1.5
 DEGREE = 3  # of the run of an edge: turn, bow and the bend of a non-linear sweep
 
 
@@ -117,7 +117,7 @@ def _by_area(strip: Strip) -> Array:
     area = (strip.levels.sum(axis=2) - width * strip.middle[:, None]) * scale
     shift = strip.start + (width - 1) / 2.0 - strip.position - area
     limit = 0.5 * min(strip.left, strip.right)
-    return _robust_run(np.clip(shift, -limit, limit), run_basis(strip.rows, 2, False))
+    return _robust_run(np.minimum(np.maximum(shift, -limit), limit), run_basis(strip.rows, 2, False))
 
 
 def _levels(before: Array, after: Array) -> tuple[Array, Array]:

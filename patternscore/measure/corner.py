@@ -11,7 +11,7 @@ from patternscore.errors import Unreadable
 from patternscore.frame import Frame
 from patternscore.measure.align import refine, settle
 from patternscore.measure.design import lay_out
-from patternscore.measure.family import relative
+from patternscore.measure.family import relative, spotted
 from patternscore.measure.fitedge import FittedEdge
 from patternscore.measure.profile import Pile, Run, Strip, coding_of, cut_strip, pile_up, slope_of
 from patternscore.measure.response import Response
@@ -86,10 +86,8 @@ def fit_corners(frame: Frame, blocks: dict[str, list[Run]], centre: FittedEdge) 
 def _shelf(strip: Strip, pile: Pile, gain: Complex, jitter: float) -> _Shelf:
     nu = step_basis().nu
     blurred = gain * np.exp(-2.0 * (np.pi * nu * jitter) ** 2)
-    family = relative(blurred)
-    spectra = np.stack([family.shape(np.array([spot, 0.0]))[0] for spot in SPOTS])
     layout = lay_out([strip], pile)
-    edges = edge_of(spectra, layout.reach(0))
+    edges = edge_of(spotted(blurred, SPOTS), layout.reach(0))
     profiles = np.stack([layout.profiles(edge).mean(axis=0) for edge in edges])
     rates = slope_of(profiles)
     columns = np.stack([np.ones_like(profiles), profiles, rates], axis=1)

@@ -18,6 +18,7 @@ Index = npt.NDArray[np.int64]
 
 NEAR = 6 * BINS  # bins each side of an edge that are taken one by one; further off whole samples will do
 OFFSET = 0.007  # prior sigma of a profile's offset, fraction of the step: tilt, hum, an error of the levels
+FINELY = 60 * BINS  # lag in bins beyond which so little of an edge is left that the nearest bin will do
 FLOOR = 1e-5  # fraction of the step: what is left out of the model anyway
 MIDDLE = 0.05  # prior sigma of the error of the middle between the levels, which shows with the edges' polarity
 BEYOND = 0.3  # prior sigma of what the pattern does beyond the clear part, steps
@@ -94,10 +95,13 @@ class Layout:
         near = self.near[None, :] + pad - moves[:, None]
         coarse = self.coarse[None, :] + pad - moves[:, None]
         if self.even:
-            fine = profiles.mean(axis=0)[near]
-        else:
-            fine = np.einsum("eb,ekb->kb", self.share, profiles[:, near])
-        return np.hstack([fine, mean[:, coarse].transpose(1, 0, 2).reshape(len(moves), -1)])
+            return np.hstack([profiles.mean(axis=0)[near], self._far(mean[:, coarse])])
+        fine = np.einsum("eb,ekb->kb", self.share, profiles[:, near])
+        return np.hstack([fine, self._far(mean[:, coarse])])
+
+    @staticmethod
+    def _far(coarse: Array) -> Array:
+        return coarse.transpose(1, 0, 2).reshape(coarse.shape[1], -1)
 
     def profiles(self, edge: Array, pad: int = 0) -> Array:
         """Profiles about each edge, from the response to one edge (``edge_of``): (edges, pad + bins + pad)."""
@@ -156,7 +160,8 @@ def _at(edge: Array, bins: Index, lags: Array) -> Array:
     whole = np.floor(lags)
     part = (lags - whole)[:, None]
     low = bins + whole.astype(np.int64)[:, None]
-    np.clip(low, 0, len(edge) - 2, out=low)
+    np.maximum(low, 0, out=low)
+    np.minimum(low, len(edge) - 2, out=low)
     return np.asarray(edge[low] * (1.0 - part) + edge[low + 1] * part)
 
 
@@ -270,25 +275,27 @@ def _matrix(layout: Layout) -> tuple[Single, Array]:
     fine = basis.matrix[near[0] + origin : near[-1] + origin + 1] * share.sum(axis=0)[:, None].astype(np.float32)
     far = np.repeat(basis.coarse[coarse + origin][None], edges, axis=0)
     fine_constant, far_constant = np.zeros(len(near)), np.zeros((edges, len(coarse)))
-    last = len(basis.times) - 2
     for part in layout.neighbours:
         plateau = 0.5 * np.sign(part.lag) * part.factor
         fine_constant -= plateau * share[part.edge]
         far_constant[part.edge] -= plateau
         for whole, amount in _split(part.lag):
-            far[part.edge] += basis.coarse[np.clip(coarse + (origin + whole), 0, last)] * np.float32(
-                amount * part.factor
-            )
+            at = coarse + (origin + whole)
+            if at[0] >= 0 and at[-1] < len(basis.times):
+                far[part.edge] += basis.coarse[at] * np.float32(amount * part.factor)
     for lag, factor in _near_parts(layout):
         for whole, amount in _split(lag):
-            at = np.clip(near + (origin + whole), 0, last)
-            fine += basis.matrix[at] * (amount * factor).astype(np.float32)[:, None]
+            start = int(near[0]) + origin + whole
+            if start >= 0 and start + len(near) <= len(basis.times):
+                fine += basis.matrix[start : start + len(near)] * (amount * factor).astype(np.float32)[:, None]
     constant = np.concatenate([fine_constant, far_constant.ravel()])
     return np.vstack([fine, far.reshape(-1, nodes)]), constant
 
 
-def _split(lag: float) -> tuple[tuple[int, float], tuple[int, float]]:
-    """Two bins, and how much of each, for a place between them."""
+def _split(lag: float) -> tuple[tuple[int, float], ...]:
+    """Bins, and how much of each, for a place between them."""
+    if abs(lag) > FINELY:
+        return ((round(lag), 1.0),)
     whole = int(np.floor(lag))
     return (whole, 1.0 - (lag - whole)), (whole + 1, lag - whole)
 

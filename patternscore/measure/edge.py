@@ -85,7 +85,7 @@ def read_edges(frame: Frame, located: Located) -> Findings:
         ``EdgeTrace``.
     """
     findings = Findings()
-    runs = lay_runs(located, list(located.plan.edges)) if located.plan.edges else {}
+    runs = lay_runs(located, list(located.plan.edges))
     along, across = _fit(frame, runs, "h"), _fit(frame, runs, "v")
     if isinstance(along, str):
         findings.miss(along, *ALONG, "corner_loss", "jitter")

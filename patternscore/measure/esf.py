@@ -282,6 +282,7 @@ def edge_spread(
         gain, slopes = gain / known, slopes / known
     origin = step_basis().origin
     rows = slice(origin - left * BINS, origin + right * BINS + 1)
-    levels = edge_of(gain)[rows] + 0.5
+    reach = max(left, right)
+    levels = edge_of(gain, reach)[(reach - left) * BINS : (reach + right) * BINS + 1] + 0.5
     covariance = response.covariance * max(response.chi2, 1.0)
     return EdgeSpread(step_basis().times[rows] / sample_rate, levels, rows, slopes, covariance)

@@ -61,7 +61,7 @@ def around(start: Start, free: tuple[int, ...] = tuple(range(8))) -> Family:
         theta = start.theta.copy()
         theta[moving] = part
         gain, slopes = transfer(theta, start.scale, nu)
-        return gain, slopes[moving]
+        return gain, slopes if len(moving) == len(slopes) else slopes[moving]
 
     return Family(shape, start.theta[moving], PRIOR[moving], LOWEST[moving], HIGHEST[moving])
 
@@ -79,6 +79,12 @@ def pole_frequency(theta: Array, scale: float) -> tuple[float, Array] | None:
     slopes = np.zeros(len(theta))
     slopes[1], slopes[2] = -a1 / (2.0 * a2 * root), 1.0 / (a2 * root) - root / (2.0 * a2**2)
     return scale * root / (2.0 * a2), scale * slopes
+
+
+def spotted(gain: Complex, spots: Array) -> Complex:
+    """Known transfer function with spots of other sizes: (spots, n); see ``relative``."""
+    square = np.minimum((step_basis().nu / 0.25) ** 2, 4.0)
+    return np.asarray(gain * np.exp(-spots[:, None] * square))
 
 
 def relative(gain: Complex) -> Family:
@@ -112,32 +118,31 @@ def transfer(theta: Array, scale: float, nu: Array) -> tuple[Complex, Complex]:
     Notes
     -----
     H = exp(-c g^2) sinc(sqrt(q) g) (1 + j b g) / (1 + j a1 g - a2 g^2) exp(-2 pi j nu t0), times a half cosine
-    from 1 to 0. The coefficients of the polynomials, not the poles, are the parameters: a pole that is not needed goes to
-    infinity where its coefficient goes to nought, and nothing becomes singular on the way.
+    from 1 to 0. The coefficients of the polynomials, not the poles, are the parameters: a pole that is not
+    needed goes to infinity where its coefficient goes to nought, and nothing becomes singular on the way.
     """
-    c, a1, a2, b, t0, middle, width, square = theta
+    c, a1, a2, b, t0, middle, width, square = (float(value) for value in theta)
     g = nu / scale
-    upper, lower = 1.0 + 1j * b * g, 1.0 + 1j * a1 * g - a2 * g**2
-    slope = np.clip((nu - middle) / width + 0.5, 0.0, 1.0)
-    limit = 0.5 + 0.5 * np.cos(np.pi * slope)
-    fall = -0.5 * np.pi / width * np.sin(np.pi * slope)
+    turn = -2j * np.pi * nu
+    upper, lower = 1.0 + (1j * b) * g, 1.0 + (1j * a1) * g - a2 * g**2
+    angle = np.pi * np.minimum(np.maximum((nu - middle) / width + 0.5, 0.0), 1.0)
+    limit = 0.5 + 0.5 * np.cos(angle)
+    fall = (-0.5 * np.pi / width) * np.sin(angle)
     through, opening = _aperture(square, g)
-    bare = np.exp(-c * g**2 - 2j * np.pi * nu * t0) / lower * limit
-    open_part = np.exp(-c * g**2 - 2j * np.pi * nu * t0) / lower * through
-    shaped = open_part * upper
+    bare = np.exp(turn * t0 - c * g**2) / lower
+    shaped = bare * upper * through
     whole = shaped * limit
-    slopes = np.stack(
-        [
-            -(g**2) * whole,
-            -1j * g / lower * whole,
-            g**2 / lower * whole,
-            1j * g * open_part * limit,
-            -2j * np.pi * nu * whole,
-            -shaped * fall,
-            -shaped * fall * (nu - middle) / width,
-            bare * upper * opening,
-        ]
-    )
+    slopes = np.empty((8, len(nu)), dtype=np.complex128)
+    g_square = g**2
+    slopes[0] = -g_square * whole
+    slopes[1] = whole / lower
+    slopes[2] = slopes[1] * g_square
+    slopes[1] *= -1j * g
+    slopes[3] = bare * (through * limit) * (1j * g)
+    slopes[4] = turn * whole
+    slopes[5] = -fall * shaped
+    slopes[6] = slopes[5] * ((nu - middle) / width)
+    slopes[7] = bare * upper * (opening * limit)
     return whole, slopes
 
 
@@ -152,7 +157,7 @@ def _aperture(square: float, g: Array) -> tuple[Array, Array]:
 class Library:
     """Members of the family spread over all that a chain may be, with their step responses.
 
-    ``edges`` and ``slopes`` are (members, bins) on the window, less one half; ``open`` tells which members have
+    ``edges`` and ``slopes`` are (members, bins) on the window, less one half; ``unlimited`` tells which members have
     no band limit.
     """
 
@@ -160,7 +165,7 @@ class Library:
     edges: Array
     slopes: Array
     gram: Array
-    open: npt.NDArray[np.bool_]
+    unlimited: npt.NDArray[np.bool_]
 
 
 @lru_cache(maxsize=16)
@@ -172,8 +177,8 @@ def library(left: int, right: int, *, across: bool = False) -> Library:
     rows = slice(basis.origin - left * BINS, basis.origin + right * BINS + 1)
     edges = np.hstack([spectra.real, spectra.imag]) @ basis.matrix[rows].T
     slopes = np.gradient(edges, 1.0 / BINS, axis=1)
-    open_ = np.array([start.theta[5] >= OPEN[0] and not across for start in starts])
-    return Library(starts, edges, slopes, _gram(edges, slopes), open_)
+    unlimited: npt.NDArray[np.bool_] = np.array([start.theta[5] >= OPEN[0] and not across for start in starts])
+    return Library(starts, edges, slopes, _gram(edges, slopes), unlimited)
 
 
 def _gram(edges: Array, slopes: Array) -> Array:
@@ -202,7 +207,7 @@ def nearest(window: Array, left: int, right: int, *, used: npt.NDArray[np.bool_]
     inner = np.stack([np.full(len(shelf.starts), seen.sum()), shelf.edges @ seen, shelf.slopes @ seen], axis=1)
     found = np.linalg.solve(gram, inner[..., None])[..., 0]
     left = float(seen @ seen) - np.einsum("ka,ka->k", found, inner)
-    left[shelf.open] *= UNUSUAL
+    left[shelf.unlimited] *= UNUSUAL
     best = int(np.argmin(left))
     _, step, shift = found[best]
     start = shelf.starts[best]

@@ -24,6 +24,7 @@ END = {"h": 4, "v": 10}  # rows kept off the ends of an edge: spot and error of 
 FEWEST = 12  # lines across an edge
 SHARP = 0.15  # codes of noise below which it shows where a code changes
 TRANSITION = 0.04  # codes by which such a place may be off: where samples happen to lie, errors of the slope
+_PARTS = np.array([0.0, 0.3, 0.7, 1.0])  # of an edge, where it is laid on the frame
 STILL = 0.1  # codes per sample below which a profile is a plateau
 LOWEST = 6.0  # IRE of step
 
@@ -84,7 +85,8 @@ class Strip:
         """Cut the windows about the present positions; small moves later on need no new cut."""
         self.start = np.floor(self.position).astype(np.int64) - self.left
         columns = self.start[..., None] + np.arange(self.left + self.right + 2)
-        np.clip(columns, 0, self.length - 1, out=columns)
+        if self.start.min() < 0 or columns[..., -1].max() >= self.length:
+            np.clip(columns, 0, self.length - 1, out=columns)
         samples = self.luma.shape[1]
         if self.across:
             columns *= samples
@@ -126,7 +128,8 @@ class Strip:
         index = nearest.astype(np.int32)
         index += np.int32(self.left * BINS + 1)
         size = (self.left + self.right) * BINS + 3
-        np.clip(index, 0, size - 1, out=index)
+        np.maximum(index, 0, out=index)
+        np.minimum(index, size - 1, out=index)
         index += (np.arange(len(index), dtype=np.int32) * np.int32(size))[:, None, None]
         return index, place
 
@@ -370,24 +373,26 @@ class Run:
 
 def lay_runs(located: Located, edges: list[Edge]) -> dict[str, Run]:
     """Lay edges of the plan on the frame, by name."""
-    parts = np.array([0.0, 0.3, 0.7, 1.0])
-    points = []
-    for edge in edges:
-        start, end = np.array(edge.start), np.array(edge.end)
-        aside = np.array([1.0, 0.0] if edge.axis == "h" else [0.0, 1.0])
-        middle = (start + end) / 2
-        points += [start + part * (end - start) for part in parts]
-        points += [middle, middle - edge.clear_before * aside, middle + edge.clear_after * aside]
-    found = located.warp.to_frame(np.array(points)).reshape(len(edges), -1, 2)
-    return {edge.name: _run(edge, place) for edge, place in zip(edges, found, strict=True)}
-
-
-def _run(edge: Edge, place: Array) -> Run:
-    rows, along = (place[:, 1], place[:, 0]) if edge.axis == "h" else (place[:, 0], place[:, 1])
-    low, high = float(rows[:4].min()), float(rows[:4].max())
-    u = (2.0 * rows[:4] - low - high) / max(high - low, 1e-6)
-    curve = np.linalg.solve(u[:, None] ** np.arange(4), along[:4])
-    return Run(edge, low, high, curve, float(along[4] - along[5]), float(along[6] - along[4]))
+    if not edges:
+        return {}
+    ends = np.array([(edge.start, edge.end) for edge in edges])
+    upright = np.array([edge.axis == "h" for edge in edges])
+    aside = np.where(upright[:, None], [1.0, 0.0], [0.0, 1.0])
+    clear = np.array([(-edge.clear_before, edge.clear_after) for edge in edges])
+    middle = ends.mean(axis=1)[:, None]
+    along = ends[:, :1] + _PARTS[None, :, None] * (ends[:, 1:] - ends[:, :1])
+    points = np.concatenate([along, middle, middle + clear[..., None] * aside[:, None]], axis=1)
+    found = located.warp.to_frame(points.reshape(-1, 2)).reshape(points.shape)
+    place = np.where(upright[:, None], found[..., 0], found[..., 1])
+    rows = np.where(upright[:, None], found[:, :4, 1], found[:, :4, 0])
+    low, high = rows.min(axis=1), rows.max(axis=1)
+    u = (2.0 * rows - (low + high)[:, None]) / np.maximum(high - low, 1e-6)[:, None]
+    curves = np.linalg.solve(u[..., None] ** np.arange(4), place[:, :4, None])[..., 0]
+    sides = np.abs(place[:, 5:] - place[:, 4:5])
+    return {
+        edge.name: Run(edge, float(low[k]), float(high[k]), curves[k], float(sides[k, 0]), float(sides[k, 1]))
+        for k, edge in enumerate(edges)
+    }
 
 
 def cut_strip(frame: Frame, runs: list[Run]) -> Strip:

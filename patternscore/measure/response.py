@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 import numpy.typing as npt
@@ -116,7 +117,7 @@ def _family(design: Design, family: Family, side: Array, prior: Array, steps: in
             damped = normal.copy()
             damped.flat[:: len(prior) + 1] *= 1.0 + damping
             move = np.linalg.solve(damped, right) * prior
-            trial = np.clip(theta + move[:count], family.lowest, family.highest)
+            trial = np.minimum(np.maximum(theta + move[:count], family.lowest), family.highest)
             new = look(trial, extra + move[count:])
             if new[3] < cost or damping > 1e4:
                 break
@@ -161,8 +162,8 @@ def _with_echoes(
     pull[count] = step - 1.0
     allowed = np.concatenate([prior[:families], np.zeros(len(taps)), prior[families:]])
     layout, pad = design.layout, int(np.abs(taps).max())
-    wide = _wide(step_basis().nu)
-    moved = layout.rows_moved(layout.profiles(edge_of(wide, layout.reach(pad)), pad), np.append(taps, 0), pad)
+    wide, edge = _wide()
+    moved = layout.rows_moved(layout.profiles(edge, pad), np.append(taps, 0), pad)
     echoes = (moved[:-1] - moved[-1]) * design.weight
     columns = np.vstack([fixed[:families], echoes, fixed[families:]])
     normal, right = columns @ columns.T, columns @ rest
@@ -198,9 +199,15 @@ def modelled(response: Response, layout: Layout) -> Array:
     return np.asarray(model)
 
 
-def _wide(nu: Array) -> Complex:
-    """Flat to 0.35 cycles per sample and gone at 0.65: what echoes 3/4 of a sample apart can hold."""
-    return np.asarray(0.5 + 0.5 * np.cos(np.pi * np.clip((nu - 0.35) / 0.3, 0.0, 1.0)), dtype=np.complex128)
+@cache
+def _wide() -> tuple[Complex, Array]:
+    """Sharp edge for the echoes: its response, flat to 0.35 cycles per sample and gone at 0.65, and profile.
+
+    That is what echoes 3/4 of a sample apart can hold.
+    """
+    fall = np.minimum(np.maximum((step_basis().nu - 0.35) / 0.3, 0.0), 1.0)
+    gain = 0.5 + 0.5 * np.cos(np.pi * fall) + 0j
+    return gain, edge_of(gain)
 
 
 def _most_probable(
