@@ -214,7 +214,7 @@ def _step_panel(axes: Any, scored: Scored) -> None:
     trace: Transfer | None = scored.findings.traces.get("transfer")
     if trace is None:
         return empty(axes, "Steps apart", scored.card.missing.get("gamma", "not read"))
-    nominal, first = np.unique(trace.nominal, return_index=True)
+    nominal, first = np.unique(np.round(trace.nominal), return_index=True)  # a flat may repeat a step's level
     apart = 100 * np.diff(trace.measured[first]) / np.maximum(np.diff(trace.curve(nominal)), 0.05)
     middles = (nominal[1:] + nominal[:-1]) / 2
     axes.axhline(100, color=EXPECTED, linewidth=0.9, linestyle="--")
