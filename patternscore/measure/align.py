@@ -226,7 +226,8 @@ def _field_shift(strip: Strip, rest: Any, rate: Any) -> float:
 def _noise(rest: Any, moved: Array, power: Array) -> float:
     """Variance of a sample about the model once every row has been moved into step."""
     flat = rest.ravel()
-    return max(float(flat @ flat) - float(np.sum(moved**2 * power)), 1e-12) / max(rest.size - moved.size, 1)
+    left = float(flat @ flat) - float(np.sum(moved**2 * power))
+    return max(left, 1e-12) / float(max(rest.size - moved.size, 1))
 
 
 def _jitter_sigma(excess: float, row_variance: float, count: int) -> float:

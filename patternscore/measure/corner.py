@@ -109,7 +109,7 @@ def _fit(pile: Pile, shelf: _Shelf, gain: Complex) -> Response:
         solved = np.linalg.solve(normal, columns @ (profile * weight))
         spot = float(np.clip(spot + solved[0] / max(solved[1], 0.1), SPOTS[0], SPOTS[-1]))
     rest = profile * weight - solved @ columns
-    chi2 = float(rest @ rest) / max(np.count_nonzero(sound) - 4, 1)
+    chi2 = float(rest @ rest) / max(int(np.count_nonzero(sound)) - 4, 1)
     variance = float(np.linalg.inv(normal)[0, 0]) / solved[1] ** 2
     whole, slopes = relative(gain).shape(np.array([spot, 0.0]))
     return Response(

@@ -249,7 +249,7 @@ def _rows(layout: Layout, pile: Pile, code: float, residue: float) -> tuple[Arra
     worth = 1.0 / np.maximum((share**2 / whole[:, near]).sum(axis=0), 1e-9)
     rise = slope_of(fine) / (BINS * max(code, 1e-9))
     far = _coarse_sum(pile.mean, coarse) / BINS
-    far_worth = BINS**2 / _coarse_sum(1.0 / whole, coarse)
+    far_worth = BINS**2 / _coarse_sum(np.asarray(1.0 / whole), coarse)
     far_rise = slope_of(far) / (BINS * max(code, 1e-9))
     keep = np.concatenate([share.sum(axis=0) > 0, (_coarse_sum(sound * 1.0, coarse) > BINS - 0.1).ravel()])
     count = np.concatenate([worth, far_worth.ravel()])

@@ -5,6 +5,7 @@ from __future__ import annotations
 import contextlib
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 import numpy.typing as npt
@@ -143,21 +144,21 @@ def _read_along(
     spread = edge_spread(fitted.response, fitted.left, fitted.right, rate, known)
     tvl = standard.tvl_from_mhz(1.0)
     for key, level in (("mtf50_h", 0.5), ("mtf10_h", 0.1)):
-        found = _take(findings, key, "MHz", "centre", lambda level=level: curve.falls_to(level, rate / 2))
+        found = _take(findings, key, "MHz", "centre", partial(curve.falls_to, level, rate / 2))
         if found is None:
             findings.miss(findings.missing[key], f"{key}_tvl")
         else:
             estimate = Estimate(found.value * tvl, found.sigma * tvl)
             findings.add(f"{key}_tvl", "TVL/PH", estimate, "centre")
-    _take(findings, "bandwidth_h", "MHz", "centre", lambda: curve.falls_to(BANDWIDTH, rate / 2))
+    _take(findings, "bandwidth_h", "MHz", "centre", partial(curve.falls_to, BANDWIDTH, rate / 2))
     for mhz in MEGAHERTZ:
-        _take(findings, f"response_{mhz}mhz", "dB", "centre", lambda mhz=mhz: curve.decibels(float(mhz)))
-    _take(findings, "flatness", "dB", "centre", lambda: curve.flatness(0.5, standard.luma_mhz))
+        _take(findings, f"response_{mhz}mhz", "dB", "centre", partial(curve.decibels, float(mhz)))
+    _take(findings, "flatness", "dB", "centre", partial(curve.flatness, 0.5, standard.luma_mhz))
     _take(findings, "rise_time", "ns", "centre", spread.rise_time)
     _take(findings, "overshoot", "%", "centre", spread.overshoot)
     _take(findings, "preshoot", "%", "centre", spread.preshoot)
     poles = fitted.poles and Estimate(fitted.poles.value * rate, fitted.poles.sigma * rate)
-    _take(findings, "ringing", "MHz", "centre", lambda: spread.ringing(poles))
+    _take(findings, "ringing", "MHz", "centre", partial(spread.ringing, poles))
     ns = 1e3 / rate
     alignment = fitted.alignment
     findings.add("jitter", "ns", Estimate(alignment.jitter * ns, alignment.jitter_sigma * ns), "centre")

@@ -76,7 +76,7 @@ class TransferCurve:
 
     def _sigma_at(self, k: int, part: float) -> float:
         slope = (1 - part) * self.slopes[:, k - 1] + part * self.slopes[:, k]
-        return float(np.sqrt(max(slope @ self.covariance @ slope, 0.0)))
+        return float(np.sqrt(max(float(slope @ self.covariance @ slope), 0.0)))
 
     def flatness(self, low: float, high: float) -> Estimate:
         """Largest departure from 0 dB between two frequencies, dB.
@@ -144,7 +144,7 @@ class EdgeSpread:
         return np.asarray(matrix @ packed.T.astype(np.float32), dtype=np.float64)
 
     def _sigma(self, direction: Array) -> float:
-        return float(np.sqrt(max(direction @ self.covariance @ direction, 0.0)))
+        return float(np.sqrt(max(float(direction @ self.covariance @ direction), 0.0)))
 
     def _step_us(self) -> float:
         return float(self.times[1] - self.times[0])

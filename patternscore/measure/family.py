@@ -206,8 +206,8 @@ def nearest(window: Array, left: int, right: int, *, used: npt.NDArray[np.bool_]
     seen = np.where(used, window, 0.0)
     inner = np.stack([np.full(len(shelf.starts), seen.sum()), shelf.edges @ seen, shelf.slopes @ seen], axis=1)
     found = np.linalg.solve(gram, inner[..., None])[..., 0]
-    left = float(seen @ seen) - np.einsum("ka,ka->k", found, inner)
-    left[shelf.unlimited] *= UNUSUAL
+    left: Array = float(seen @ seen) - np.asarray(np.einsum("ka,ka->k", found, inner))
+    left = np.where(shelf.unlimited, UNUSUAL * left, left)
     best = int(np.argmin(left))
     _, step, shift = found[best]
     start = shelf.starts[best]

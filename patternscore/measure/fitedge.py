@@ -116,7 +116,7 @@ def _poles(response: Response, scale: float) -> Estimate | None:
         return None
     value, slopes = found
     covariance = response.covariance[: len(slopes), : len(slopes)] * max(response.chi2, 1.0)
-    return Estimate(value, float(np.sqrt(max(slopes @ covariance @ slopes, 0.0))))
+    return Estimate(value, float(np.sqrt(max(float(slopes @ covariance @ slopes), 0.0))))
 
 
 def _strips(frame: Frame, blocks: list[list[Run]]) -> list[Strip]:

@@ -175,7 +175,7 @@ def _with_echoes(
     inverse = np.linalg.inv(factor) * allowed
     step = step + float(solved[count])
     after = rest - solved @ columns
-    used = max(np.count_nonzero(design.weight) - families - 2, 1)
+    used = max(int(np.count_nonzero(design.weight)) - families - 2, 1)
     return Response(
         nu=step_basis().nu,
         gain=gain + solved[:count] @ slopes / step,
@@ -206,7 +206,7 @@ def _wide() -> tuple[Complex, Array]:
     That is what echoes 3/4 of a sample apart can hold.
     """
     fall = np.minimum(np.maximum((step_basis().nu - 0.35) / 0.3, 0.0), 1.0)
-    gain = 0.5 + 0.5 * np.cos(np.pi * fall) + 0j
+    gain: Complex = np.asarray(0.5 + 0.5 * np.cos(np.pi * fall), dtype=np.complex128)
     return gain, edge_of(gain)
 
 
@@ -251,6 +251,6 @@ def _solve(normal: Array, right: Array, allowed: Array, pull: Array) -> tuple[Ar
     """
     whole = normal * np.outer(allowed, allowed)
     whole.flat[:: len(allowed) + 1] += 1.0
-    factor = np.linalg.cholesky(whole)
+    factor: Array = np.asarray(np.linalg.cholesky(whole), dtype=np.float64)
     solved = np.linalg.solve(whole, right * allowed - pull / allowed) * allowed
     return solved, factor
