@@ -70,20 +70,21 @@ def _clear_arms(grid: Grid) -> Array:
     return np.array([[[way in arms for way in pair] for pair in ("ud", "lr")] for arms in grid.arms], float)
 
 
-def _coarse(lines: _Lines, half_width: float) -> Array:
-    """Shift of each line by its ridge response, to the nearest sample or better."""
-    narrow = np.exp(-0.5 * (np.arange(-8, 9) / max(half_width, 1.0)) ** 2)
-    ridge = narrow - narrow.mean()
+def _coarse(lines: _Lines, half_width: float) -> tuple[Array, Array]:
+    """Shift of each line by its ridge response, good to a fraction of a sample, and how strong it is."""
     import cv2
 
+    narrow = np.exp(-0.5 * (np.arange(-8, 9) / max(half_width, 1.0)) ** 2)
+    ridge = narrow - narrow.mean()
     centred = (lines.profiles - lines.profiles.mean(1, keepdims=True)).astype(np.float32)
     response = cv2.filter2D(centred, -1, ridge[None].astype(np.float32), borderType=cv2.BORDER_CONSTANT)
-    response = response[:, 3:-3] - 0.002 * np.ptp(response) * np.abs(lines.offsets[3:-3])
+    offsets = lines.offsets[3:-3]
+    response = response[:, 3:-3] - 0.002 * np.ptp(response) * np.abs(offsets)
     top = np.clip(response.argmax(1), 1, response.shape[1] - 2)
     at = np.arange(len(top))
     before, middle, after = response[at, top - 1], response[at, top], response[at, top + 1]
     bend = np.minimum(before - 2 * middle + after, -1e-6)
-    return np.asarray(lines.offsets[3:-3][top] + np.clip(0.5 * (before - after) / bend, -1, 1))
+    return np.asarray(offsets[top] + np.clip(0.5 * (before - after) / bend, -1, 1)), middle
 
 
 def _line_shape(distance: Array, thickness: float, blur: float) -> tuple[Array, Array, Array]:
@@ -110,7 +111,9 @@ def noise_level(luma: Array) -> float:
     return float(1.4826 * np.median(np.abs(bend)) / np.sqrt(6.0))
 
 
-def _refine(lines: _Lines, shifts: Array, noise: Array, thickness: float, rounds: int) -> tuple[Array, Array, Array]:
+def _refine(
+    lines: _Lines, shifts: Array, noise: Array, thickness: float, rounds: int = 2
+) -> tuple[Array, Array, Array]:
     """Least-squares shift of each line against the shape of a blurred line; the blur is one for all.
 
     Parameters
@@ -163,7 +166,8 @@ def measure_crossings(
     noise : float
         rms noise of the frame, IRE; the sigmas follow from it.
     wide : bool
-        Search over a third of a cell; else over a sixth, which keeps other features out.
+        Search over a third of a cell, to a fraction of a sample and with no sigma; else measure within a sixth,
+        which keeps other features out.
     """
     index, xy = predicted(grid)
     points = warp.to_frame(xy)
@@ -179,11 +183,12 @@ def measure_crossings(
     shifts, sigma, good = np.zeros_like(points), np.ones_like(points), np.ones(len(points), dtype=bool)
     for axis in (0, 1):
         lines = _profiles(luma, points, slopes, arms[:, axis], axis, reach[axis], clear)
-        start = _coarse(lines, 0.05 * cell[axis]) if wide else np.zeros(len(points))
-        rows = arms[:, axis].sum(1) * (clear[1] - clear[0] + 1)
-        shifts[:, axis], sigma[:, axis], height = _refine(
-            lines, start, noise / np.sqrt(rows), thick[axis], 1 if wide else 2
-        )
+        if wide:
+            shifts[:, axis], height = _coarse(lines, 0.05 * cell[axis])
+        else:
+            rows = arms[:, axis].sum(1) * (clear[1] - clear[0] + 1)
+            still = np.zeros(len(points))
+            shifts[:, axis], sigma[:, axis], height = _refine(lines, still, noise / np.sqrt(rows), thick[axis])
         good &= (height > 0.4 * np.median(height)) & (np.abs(shifts[:, axis]) < reach[axis] - 2)
     # The two lines lean a little: go from the predicted crossing along both to where they meet.
     lean_x = slopes[:, 0, 1] / slopes[:, 1, 1]

@@ -19,7 +19,7 @@ from patternscore.warp import Warp, fit_warp
 
 Array = npt.NDArray[Any]
 _LEAST_LIKENESS = 0.6  # rank correlation of the levels seen with the plan's tones
-_ROUGH = 1.0  # samples rms
+_ROUGH = 0.6  # samples rms
 _TERMS = {1: 3, 2: 6, 3: 10, 4: 15}
 
 
