@@ -9,7 +9,8 @@ from scipy.special import ndtr
 from patternscore.errors import Unreadable
 from patternscore.frame import Frame
 from patternscore.layout import chart_plan
-from patternscore.measure.ruler import axis_of, read_bars, straighten
+from patternscore.measure.ruler import read_bars
+from patternscore.measure.rulerband import axis_of, straighten
 from patternscore.measure.scanmap import fit_scan, linearity
 from patternscore.measure.stepshape import StepShape
 from patternscore.standard import STANDARD_525

@@ -170,7 +170,8 @@ def _forward(at: Array, place: Array, doubt: Array, bar: float, wary: bool) -> A
     away = (at - at[0]) / bar
     clear = (away >= 1.5) & (away <= 16.0) if wary else away <= 16.0
     nearness = 1.0 if wary else np.exp(-away[clear, None] / 2.0)
-    powers = np.polynomial.polynomial.polyvander(at[clear], 2)
+    x = at[clear]
+    powers = np.stack([np.ones_like(x), x, x * x], 1)
     weighted = nearness * powers / (doubt[clear, None] + 0.02) ** 2
     normal = weighted.T @ powers + np.diag([0.0, 0.0, 1e-4])
     return np.asarray(np.linalg.solve(normal, weighted.T @ place[clear]))

@@ -1,8 +1,7 @@
-"""Reading a ruler: its band straightened into one line of bars, and the place of every bar edge.
+"""Reading a ruler: the place of every bar edge of its straightened band.
 
-The band is followed along the picture with the located warp and averaged across, so noise and line jitter
-average out. The edges are then fitted together: the bars are a sum of steps of one common shape, so each
-edge is freed from the tails of its neighbours.
+The edges are fitted together: the bars are a sum of steps of one common shape, so each edge is freed from the
+tails of its neighbours.
 """
 
 from __future__ import annotations
@@ -10,62 +9,22 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass, replace
 from functools import lru_cache
-from typing import Literal
 
-import cv2
 import numpy as np
 import numpy.typing as npt
 
 from patternscore.errors import Unreadable
-from patternscore.frame import Frame
+from patternscore.measure.rulerband import Strip
 from patternscore.measure.stepshape import StepShape, StepTrain, finer_shape, fit_shape, spot_width
 from patternscore.plan import Ruler
-from patternscore.warp import Warp
 
 Array = npt.NDArray[np.float64]
-Axis = Literal["h", "v"]
-USED = 0.72  # part of the band's depth that is averaged; the rest is margin for tilt and for the spot
-FEWEST = 4  # rows that a mean needs
 MOST_TURNS = 6
+REFITTED = 0.1  # samples: after larger moves the shape of the step is fitted anew
 SETTLED = 0.02  # samples: edges that move less than this need no further turn
 CLEAR = 2.5  # samples between the edge of blanking and a bar edge that is not disturbed by it
 READMITTED = 1.5  # samples by which an edge at the end of a ruler may leave the run of the warp's error
 REACH = 5  # samples either side of its expected place within which an edge is sought
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Strip:
-    """A ruler's band, straightened; index n of every array along it is frame coordinate n.
-
-    Attributes
-    ----------
-    axis : {"h", "v"}
-        "h": along the line, in samples; "v": down the frame, in lines.
-    across : float
-        Middle of the band, picture fraction across the ruler's axis.
-    covered : (float, float)
-        Picture fractions across between which its rows were taken.
-    tilt : float
-        By how much the bars lean within the band, samples, or the band runs aslant.
-    mean : (n,) float64
-        Mean of the rows, IRE.
-    scatter : (n,) float64
-        Half the difference of the means of two halves of the rows: what noise does to ``mean``.
-    seen : (n,) bool
-        Where enough rows lie in the frame.
-    expected : (boundaries,) float64
-        Where the warp puts the ruler's boundaries.
-    """
-
-    ruler: Ruler
-    axis: Axis
-    across: float
-    covered: tuple[float, float]
-    tilt: float
-    mean: Array
-    scatter: Array
-    seen: npt.NDArray[np.bool_]
-    expected: Array
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -111,7 +70,7 @@ class Bars:
     def level(self) -> Array:
         """Levels along the strip: 0 for dark bars, 1 for light ones, the fields made alike."""
         count = self.strip.mean.size
-        powers = np.polynomial.polynomial.polyvander(np.arange(count) * (2.0 / count) - 1.0, 2)
+        powers = _powers(count)
         lifted = self.strip.mean - powers @ self.base - self.lift * (np.arange(count) % 2)
         return np.asarray(lifted / (powers @ self.swing))
 
@@ -119,115 +78,6 @@ class Bars:
     def contrast(self) -> float:
         """Light less dark in the middle, IRE."""
         return float(self.swing[0])
-
-
-def axis_of(ruler: Ruler) -> Axis:
-    """Which way a ruler runs."""
-    return "h" if ruler.side in ("top", "bottom") else "v"
-
-
-@dataclass(frozen=True, slots=True)
-class Bend:
-    """A folded stretch: from ``turning`` to the near or far end of the frame the scan runs back.
-
-    ``ratio`` is the backward over the forward speed; 0 leaves it open and takes the band at its turning point.
-    """
-
-    turning: float
-    ratio: float
-    far: bool
-
-    def forward(self, index: Array) -> tuple[Array, Array]:
-        """Forward coordinate that shows the same place, and the backward slowness (0 where forward)."""
-        back = index > self.turning if self.far else index < self.turning
-        shown = np.where(back, self.turning - self.ratio * (index - self.turning), index)
-        return shown, np.where(back, -1.0 / self.ratio if self.ratio > 0 else 0.0, 1.0)
-
-
-def straighten(frame: Frame, warp: Warp, ruler: Ruler, bend: Bend | None = None) -> Strip:
-    """Follow a ruler's band through the frame and lay it straight.
-
-    Parameters
-    ----------
-    frame : Frame
-        The frame.
-    warp : Warp
-        Picture fractions to frame coordinates, good to a sample or so.
-    ruler : Ruler
-        The ruler.
-    bend : Bend, optional
-        A fold, where the band leans and bows the other way.
-
-    Raises
-    ------
-    Unreadable
-        If the band lies outside the frame.
-    """
-    axis = axis_of(ruler)
-    along, count = (0, frame.samples) if axis == "h" else (1, frame.rows)
-    limit = (frame.rows if axis == "h" else frame.samples) - 1
-    middle = (ruler.band[0] + ruler.band[1]) / 2
-    fractions = np.concatenate([np.linspace(-0.04, 1.04, 28), ruler.boundaries])
-    points = np.full((fractions.size, 2), middle)
-    points[:, along] = fractions
-    found, slopes = warp.to_frame(points), warp.slopes(points)
-    shear = slopes[:, along, 1 - along] / slopes[:, 1 - along, 1 - along]
-    index = np.arange(count, dtype=np.float64)
-    guide = found[:28, along]
-    if np.any(np.diff(guide) <= 0):
-        raise Unreadable(f"the {ruler.side} ruler could not be followed")
-    followed, slow = bend.forward(index) if bend is not None else (index, np.ones(1))
-    centre = np.interp(followed, guide, found[:28, 1 - along])
-    lean = np.interp(followed, guide, shear[:28]) * slow
-    depth = abs(ruler.band[1] - ruler.band[0]) * float(np.mean(slopes[:28, 1 - along, 1 - along]))
-    half = max(int(depth * USED / 2), 2)
-    steps = np.arange(-half, half + 1, dtype=np.float64)[:, None]
-    # Whole rows are taken: what lies between two would share their noise.
-    across_map = np.rint(centre[None, :] + steps).astype(np.float32)
-    along_map = (index[None, :] + lean[None, :] * (across_map - centre[None, :])).astype(np.float32)
-    maps = (along_map, across_map) if axis == "h" else (across_map, along_map)
-    rows = cv2.remap(frame.luma, maps[0], maps[1], cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
-    inside = (across_map >= 0) & (across_map <= limit)
-    used = _alike(rows, inside)
-    mean, scatter, seen = _means(rows, used)
-    if seen.sum() < 0.5 * count:
-        raise Unreadable(f"the {ruler.side} ruler lies outside the frame")
-    taken = steps[used.mean(1) > 0.5, 0] if used.any() else steps[:, 0]
-    wide = (ruler.band[1] - ruler.band[0]) / depth
-    covered = (middle + (taken.min() - 0.5) * wide, middle + (taken.max() + 0.5) * wide) if taken.size else ruler.band
-    tilt = max(half * float(np.abs(lean).max()), 0.02 * float(np.ptp(centre)))
-    return Strip(ruler, axis, middle, covered, tilt, mean, scatter, seen, found[28:, along])
-
-
-def _alike(rows: npt.NDArray[np.float32], inside: npt.NDArray[np.bool_]) -> npt.NDArray[np.bool_]:
-    """Where rows lie in the frame, less whole rows that do not show the bars: a fold may reach into the band."""
-    usual_row = rows.mean(0) - rows.mean()
-    centred = rows - rows.mean(1)[:, None]
-    if inside.all():
-        gain = centred @ usual_row / max(float(usual_row @ usual_row), 1e-3)
-    else:
-        shown = inside.astype(np.float32)
-        gain = (centred * shown) @ usual_row / np.maximum(shown @ usual_row**2, 1e-3)
-    usual = np.median(gain[inside.any(1)]) if inside.any() else 0.0
-    alike = np.abs(gain - usual) < 0.35 * abs(usual)
-    return inside if alike.all() else inside & alike[:, None]
-
-
-def _means(rows: npt.NDArray[np.float32], inside: npt.NDArray[np.bool_]) -> tuple[Array, Array, npt.NDArray[np.bool_]]:
-    """Mean of the rows, the scatter of the mean, and where there were rows enough.
-
-    The halves are made of pairs of neighbouring rows, so that both hold as much of either field.
-    """
-    first = (np.arange(rows.shape[0]) // 2 % 2 == 0).astype(np.float32)
-    split = np.stack([first, 1 - first])
-    if inside.all():
-        sums, counts = split @ rows, split.sum(1)[:, None] * np.ones((1, rows.shape[1]), dtype=np.float32)
-    else:
-        sums, counts = split @ (rows * inside), split @ inside.astype(np.float32)
-    total = counts.sum(0)
-    mean = sums.sum(0) / np.maximum(total, 1)
-    each = sums / np.maximum(counts, 1)
-    return mean.astype(np.float64), ((each[0] - each[1]) / 2).astype(np.float64), total >= FEWEST
 
 
 @lru_cache(maxsize=32)
@@ -263,10 +113,9 @@ def read_bars(strip: Strip, shown: tuple[float, float] = (-math.inf, math.inf)) 
     at, sign, expected = at[inside], sign[inside], expected[inside]
     if at.size < 12:
         raise Unreadable(f"too little of the {strip.ruler.side} ruler lies in the frame")
-    base, swing = _levels(strip)
-    u = _u(count)
-    height = np.polynomial.polynomial.polyval(u, swing)
-    flat = (strip.mean - np.polynomial.polynomial.polyval(u, base)) / height
+    powers = _powers(count)
+    base, swing = _levels(strip, powers)
+    flat = (strip.mean - powers @ base) / (powers @ swing)
     place, found = _crossings(flat, expected, sign)
     place, found = _agree(at, place, found, expected)
     if found.sum() < 12:
@@ -274,37 +123,35 @@ def read_bars(strip: Strip, shown: tuple[float, float] = (-math.inf, math.inf)) 
     return _refine(strip, at, sign, place, found, base, swing)
 
 
-def _u(count: int) -> Array:
-    return np.arange(count) * (2.0 / count) - 1.0
+@lru_cache(maxsize=8)
+def _powers(count: int) -> Array:
+    """Powers 0 to 2 of -1 to 1 along a strip, (count, 3)."""
+    u = np.arange(count) * (2.0 / count) - 1.0
+    return np.stack([np.ones_like(u), u, u * u], 1)
 
 
-def _levels(strip: Strip) -> tuple[Array, Array]:
-    """Levels of dark and light bars along the strip, from the middles of the bars."""
+def _levels(strip: Strip, powers: Array) -> tuple[Array, Array]:
+    """Levels of dark bars and of light above dark along the strip, from the middles of the bars."""
     middles = (strip.expected[1:] + strip.expected[:-1]) / 2
     count = strip.mean.size
     bits = np.asarray(strip.ruler.bits)
-    use = (middles > 1) & (middles < count - 2) & strip.seen[np.clip(middles, 0, count - 1).astype(int)]
+    nearest = np.minimum(np.maximum(middles + 0.5, 0), count - 1).astype(np.intp)
+    use = (middles > 1) & (middles < count - 2) & strip.seen[nearest]
     # The outermost bars may be folded over; levels are taken from the others.
-    use &= (np.arange(bits.size) >= 4) & (np.arange(bits.size) < bits.size - 4)
-    values = np.interp(middles, np.arange(count), strip.mean)
-    u = middles * (2.0 / count) - 1.0
-    if (use & bits).sum() < 6 or (use & ~bits).sum() < 6:
+    use[:4] = use[-4:] = False
+    lit = int(np.count_nonzero(use & bits))
+    if lit < 6 or np.count_nonzero(use) - lit < 6:
         raise Unreadable(f"too little of the {strip.ruler.side} ruler lies in the frame")
-    light = _parabola(u[use & bits], values[use & bits])
-    dark = _parabola(u[use & ~bits], values[use & ~bits])
-    swing = light - dark
-    low = np.polynomial.polynomial.polyval(np.linspace(-1, 1, 9), swing).min()
+    chosen = nearest[use]
+    design = np.concatenate([powers[chosen], powers[chosen] * bits[use, None]], axis=1)
+    # Curves are held back where the reach is short.
+    normal = design.T @ design + np.diag([0.0, 0.1, 1.0, 0.0, 0.1, 1.0])
+    found = np.linalg.solve(normal, design.T @ strip.mean[chosen])
+    low = float((powers[:: max(count // 8, 1)] @ found[3:]).min())
     noise = float(np.sqrt(np.mean(strip.scatter**2)))
     if low < max(4.0, 4 * noise):
         raise Unreadable(f"the bars of the {strip.ruler.side} ruler cannot be told from its ground")
-    return dark, swing
-
-
-def _parabola(u: Array, values: Array) -> Array:
-    """Least-squares parabola, lowest power first, with the curve held back where the reach is short."""
-    design = np.stack([np.ones_like(u), u, u * u], 1)
-    normal = design.T @ design + np.diag([0.0, 0.1, 1.0])
-    return np.asarray(np.linalg.solve(normal, design.T @ values))
+    return found[:3], found[3:]
 
 
 def _crossings(flat: Array, expected: Array, sign: Array) -> tuple[Array, npt.NDArray[np.bool_]]:
@@ -327,14 +174,19 @@ def _agree(
 ) -> tuple[Array, npt.NDArray[np.bool_]]:
     """Keep edges whose departure from the warp runs smoothly along the ruler."""
     u = 2.0 * at - 1.0
-    design = np.polynomial.polynomial.polyvander(u, 3)
+    design = np.stack([np.ones_like(u), u, u * u, u**3], 1)
     off = place - expected
     good = found.copy()
     for limit in (3.0, 1.8, 1.2):
         if good.sum() < 8:
             return place, good
-        curve = design @ np.linalg.lstsq(design[good], off[good], rcond=None)[0]
-        good = found & (np.abs(off - curve) < limit)
+        fitted = design[good]
+        normal = fitted.T @ fitted + 1e-9 * np.eye(4)
+        curve = design @ np.linalg.solve(normal, fitted.T @ off[good])
+        away = np.abs(off - curve)
+        good = found & (away < limit)
+        if good.all() and away.max() < 1.2:
+            return place, good
     for order in (np.arange(at.size), np.arange(at.size)[::-1]):
         _readmit(at, off, found, good, order)
     return np.where(good, place, expected + curve), good
@@ -367,31 +219,37 @@ def _refine(
 ) -> Bars:
     """Fit step shape, levels and edge places in turn."""
     good = found
-    u = _u(strip.mean.size)
-    powers = np.stack([np.ones_like(u), u, u * u], 1)
+    powers = _powers(strip.mean.size)
     fields = strip.axis == "v"
     width = lag = 0.0
+    moved = math.inf
     for turn in range(MOST_TURNS):
         run = np.flatnonzero(good)
         first, last = place[run[0]] - 3.0, place[run[-1]] + 3.0
         low, high = max(math.ceil(first), 0), min(math.floor(last), strip.mean.size - 1)
         part, inner = slice(low, high + 1), slice(run[0], run[-1] + 1)
-        scale = (powers @ swing)[part]
-        mean = strip.mean[part]
+        mean, scale = strip.mean[part], powers[part] @ swing
         train = StepTrain(low, high, place[inner], sign[inner], lag)
         if turn == 0:
-            width = spot_width((mean - (powers @ base)[part]) / scale, train)
-        fitted = fit_shape(mean, powers[part], scale, train, width, fields=fields)
-        width, base, swing = fitted.width, fitted.base, fitted.swing
-        scale = (powers @ swing)[part]
-        whole = StepTrain(low, high, place, sign, lag)
-        shifts = fitted.shape.shifts(fitted.left / scale, whole)
-        lag = fitted.lag
-        place = np.where(good, place + np.clip(shifts.move, -0.7, 0.7), place)
+            width = spot_width((mean - powers[part] @ base) / scale, train)
+        if moved > REFITTED:
+            fitted = fit_shape(mean, powers[part], scale, train, width, fields=fields)
+            # A width that was far off calls for another fit as much as a lag does.
+            moved = max(abs(fitted.lag - lag), 0.4 * abs(fitted.width / width - 1.0))
+            width, lag, base, swing, left = fitted.width, fitted.lag, fitted.base, fitted.swing, fitted.left
+            scale = powers[part] @ swing
+        else:
+            left = mean - powers[part] @ base - scale * fitted.shape.wave(train)
+            left -= fitted.lift * (np.arange(low, high + 1) % 2)
+            moved = 0.0
+        whole = StepTrain(low, high, place, sign, train.lag)
+        shifts = fitted.shape.shifts(left / scale, whole)
+        place = np.where(good, place + np.minimum(np.maximum(shifts.move, -0.7), 0.7), place)
         good = good & (np.abs(shifts.move) < 1.5) & (shifts.rest < 0.25)
-        if good.sum() < 10:
+        if np.count_nonzero(good) < 10:
             raise Unreadable(f"the bars of the {strip.ruler.side} ruler do not stand in their order")
-        if turn > 0 and np.abs(shifts.move[good]).max() < SETTLED:
+        moved = max(moved, float(np.abs(shifts.move[good]).max()))
+        if turn > 0 and moved < SETTLED:
             break
     noise = fitted.shape.shifts(strip.scatter[part] / scale, whole).move
     return Bars(strip, at, sign, place, good, noise, shifts.doubt, fitted.shape, base, swing, lag, fitted.lift)

@@ -14,7 +14,8 @@ from patternscore.frame import Frame
 from patternscore.located import Located
 from patternscore.measure.fold import PLAIN, Fold, find_fold, no_fold, suspect
 from patternscore.measure.foldview import FAR, view_edge
-from patternscore.measure.ruler import Axis, Bars, Bend, axis_of, read_bars, sharpen, straighten
+from patternscore.measure.ruler import Bars, read_bars, sharpen
+from patternscore.measure.rulerband import Axis, Bend, axis_of, straighten
 from patternscore.measure.scanmap import ScanMap, crush, fit_scan, linearity
 from patternscore.measure.stepshape import StepShape
 from patternscore.plan import Side

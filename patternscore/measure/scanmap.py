@@ -15,7 +15,8 @@ import numpy.typing as npt
 
 from patternscore.errors import Unreadable
 from patternscore.located import Crossings
-from patternscore.measure.ruler import Axis, Bars
+from patternscore.measure.ruler import Bars
+from patternscore.measure.rulerband import Axis, middle
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[np.float64]
@@ -78,20 +79,18 @@ class ScanMap:
         fractions = np.atleast_1d(np.asarray(x, dtype=np.float64))
         return np.asarray(_design(fractions, np.full(fractions.size, side), self.axis) @ self.coefficients)
 
-    def linear(self, x: npt.ArrayLike, weights: npt.ArrayLike) -> Estimate:
+    def linear(self, x: tuple[float, ...], weights: tuple[float, ...]) -> Estimate:
         """Weighted sum of frame coordinates, with its standard deviation."""
-        fractions = np.asarray(x, dtype=np.float64)
-        row = np.asarray(weights) @ _design(fractions, np.zeros(fractions.size), self.axis)
+        row = np.asarray(weights) @ _fixed(x, self.axis)
         spread = self.edge_sigma * float(np.sqrt(max(row @ self.covariance @ row, 0.0)))
         return Estimate(float(row @ self.coefficients), spread)
 
     def speeds(self) -> tuple[Array, Array]:
         """Scan speed of each cell over the mean, and its standard deviation."""
-        walls = np.linspace(0.0, 1.0, CELLS[self.axis] + 1)
-        design = _design(walls, np.zeros(walls.size), self.axis)
-        across = np.diff(design, axis=0)
+        count = CELLS[self.axis]
+        across = np.diff(_fixed(tuple(wall / count for wall in range(count + 1)), self.axis), axis=0)
         taken = across @ self.coefficients
-        spread = self.edge_sigma * np.sqrt(np.einsum("ij,jk,ik->i", across, self.covariance, across))
+        spread = self.edge_sigma * np.sqrt(np.sum(across @ self.covariance * across, axis=1))
         speed = 1.0 / taken
         mean = speed.mean()
         return speed / mean, spread / taken * speed / mean
@@ -110,9 +109,21 @@ def _spline(x: Array, pieces: int) -> Array:
 
 
 def _design(x: Array, side: Array, axis: Axis) -> Array:
-    spline = _spline(x, PIECES[axis])
-    powers = np.polynomial.polynomial.polyvander(2.0 * x - 1.0, SIDE_TERMS - 1) * side[:, None]
-    return np.concatenate([spline, powers], axis=1)
+    u = 2.0 * x - 1.0
+    return np.concatenate([_spline(x, PIECES[axis]), side[:, None] * np.stack([u**0, u, u * u, u**3], 1)], axis=1)
+
+
+@lru_cache(maxsize=64)
+def _fixed(x: tuple[float, ...], axis: Axis) -> Array:
+    """Design of the picture's mean at fractions that are asked for again and again."""
+    return _design(np.array(x), np.zeros(len(x)), axis)
+
+
+@lru_cache(maxsize=64)
+def _of_edges(at: bytes, side: float, axis: Axis) -> Array:
+    """Design of a ruler's edges, given as the bytes of their fractions; they are mostly the same ones."""
+    fractions = np.frombuffer(at)
+    return _design(fractions, np.full(fractions.size, side), axis)
 
 
 @lru_cache
@@ -136,10 +147,10 @@ class _Marks:
     good: npt.NDArray[np.bool_]
 
 
-def _of_crosshatch(crossings: Crossings, axis: Axis, middle: float) -> _Marks:
+def _of_crosshatch(crossings: Crossings, axis: Axis, away: float) -> _Marks:
     """Crosshatch crossings as marks: they share rows (columns), so that each counts for a part of one."""
     along = 0 if axis == "h" else 1
-    at, side = crossings.xy[:, along], (crossings.xy[:, 1 - along] - 0.5) / middle
+    at, side = crossings.xy[:, along], (crossings.xy[:, 1 - along] - 0.5) / away
     _, row, count = np.unique(crossings.index[:, along], return_inverse=True, return_counts=True)
     design = np.concatenate([_design(at, side, axis), np.zeros((at.size, 1)), _bow(at, side)], axis=1)
     error = np.sqrt((LINE_DOUBT**2 + crossings.sigma[:, along] ** 2) * count[row])
@@ -153,10 +164,10 @@ def _bow(at: Array, side: Array) -> Array:
 
 def _of_rulers(bars: list[Bars], axis: Axis, spread: float) -> _Marks:
     """Bar edges as marks, each with its error from noise and doubt."""
-    at = np.concatenate([one.at for one in bars])
-    sides = np.concatenate([np.full(one.at.size, np.sign(one.strip.across - 0.5)) for one in bars])
-    parts = [_design(at, sides if len(bars) > 1 else 0.0 * sides, axis)]
-    parts += [np.concatenate([one.sign for one in bars])[:, None], np.zeros((at.size, 1))]
+    sides = [float(np.sign(one.strip.across - 0.5)) if len(bars) > 1 else 0.0 for one in bars]
+    curve = [_of_edges(one.at.tobytes(), side, axis) for one, side in zip(bars, sides, strict=True)]
+    sign = np.concatenate([one.sign for one in bars])[:, None]
+    parts = [np.concatenate(curve), sign, np.zeros_like(sign)]
     doubt = np.concatenate([one.doubt for one in bars])
     return _Marks(
         np.concatenate(parts, axis=1),
@@ -187,7 +198,7 @@ def fit_scan(bars: list[Bars], crossings: Crossings | None = None) -> ScanMap:
     spread = float(np.sqrt(np.mean(np.concatenate([part - part.mean() for part in parts]) ** 2)))
     common = float(np.sqrt(np.mean([part.mean() ** 2 for part in parts]) / len(parts)))
     marks = _of_rulers(bars, axis, spread)
-    vague = bool(np.median(marks.error) > VAGUE)
+    vague = middle(marks.error) > VAGUE
     count = marks.place.size
     if vague and crossings is not None:
         more = _of_crosshatch(crossings, axis, abs(bars[0].strip.across - 0.5))
@@ -226,7 +237,7 @@ def _draw(marks: _Marks, penalty: Array) -> tuple[Array, Array, Array, npt.NDArr
         coefficients = inverse @ (weighted.T @ marks.place)
         left = marks.place - marks.design @ coefficients
         off = np.abs(left) / marks.error
-        limit = max(5.0 * float(np.median(off[used])), 4.0)
+        limit = max(5.0 * middle(off[used]), 4.0)
         fresh = marks.good & ((off < limit) | (np.abs(left) < ASTRAY))
         if np.array_equal(fresh, used):
             break

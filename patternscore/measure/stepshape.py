@@ -101,15 +101,13 @@ class StepShape:
 
     def at(self, tau: Array) -> Array:
         """Value of the step at distances in samples after its half-way point."""
-        where = (tau + REACH) * FINE
-        cell = np.clip(where.astype(np.int64), 0, self.table.size - 2)
-        part = np.clip(where - cell, 0.0, 1.0)
-        lower = self.table[cell]
-        return np.asarray(lower + part * (self.table[cell + 1] - lower))
+        return _between(self.table, tau)
 
     def slope(self, tau: Array) -> Array:
         """Slope per sample at distances in samples after the half-way point."""
-        return self.at(tau + 0.25) * 2.0 - self.at(tau - 0.25) * 2.0
+        rise = np.zeros_like(self.table)
+        rise[2:-2] = (self.table[4:] - self.table[:-4]) * (FINE / 4.0)
+        return _between(rise, tau)
 
     def wave(self, train: StepTrain) -> Array:
         """Sum of the train's steps over its samples, from dark (0) to light (1)."""
@@ -121,14 +119,10 @@ class StepShape:
         wave = train.start + np.cumsum(total)[:count]
         return np.asarray(wave + _summed(train, self.at, REACH))
 
-    def widening(self, train: StepTrain) -> Array:
-        """Change of the wave per unit of width, were the step Gaussian."""
-
-        def change(tau: Array) -> Array:
-            z = tau / self.width
-            return np.asarray(z * np.exp(-0.5 * z * z) * (-1.0 / (self.width * math.sqrt(2.0 * math.pi))))
-
-        return _summed(train, change, min(max(math.ceil(4 * self.width), 2), REACH))
+    def widening(self, tau: Array) -> Array:
+        """Change of the step per unit of width, were it Gaussian."""
+        z = tau / self.width
+        return np.asarray(z * np.exp(-0.5 * z * z) * (-1.0 / (self.width * math.sqrt(2.0 * math.pi))))
 
     def shifts(self, left: Array, train: StepTrain) -> Shifts:
         """Find the move of each step that takes up what is left of a train's bars, 0 to 1.
@@ -139,8 +133,8 @@ class StepShape:
         index = np.rint(train.place).astype(np.int64)[:, None] + np.arange(-WINDOW, WINDOW + 1)[None, :]
         slope = -self.slope(train.taken(index) - train.place[:, None]) * train.sign[:, None]
         inside = (index >= train.low) & (index <= train.high)
-        values = np.where(inside, left[np.clip(index - train.low, 0, left.size - 1)], 0.0)
-        slope = np.where(inside, slope, 0.0)
+        slope *= inside
+        values = left[np.minimum(np.maximum(index - train.low, 0), left.size - 1)] * inside
         level = LEVEL_DOUBT * (1.0 + 30.0 * math.exp(-((self.width / SHARP) ** 6)))
         energy = np.sum(slope * slope, 1) + (level / PLACE_DOUBT) ** 2
         move = np.sum(slope * values, 1) / energy
@@ -148,12 +142,24 @@ class StepShape:
         return Shifts(move, np.sqrt(np.mean(rest * rest, 1)), level / np.sqrt(energy))
 
 
+def _between(table: Array, tau: Array) -> Array:
+    """Look a table of a step up between its points."""
+    where = np.minimum(np.maximum(tau * FINE + REACH * FINE, 0.0), table.size - 1.0)
+    cell = where.astype(np.intp)
+    rise = np.empty_like(table)
+    np.subtract(table[1:], table[:-1], out=rise[:-1])
+    rise[-1] = 0.0
+    return np.asarray(table[cell] + (where - cell) * rise[cell])
+
+
 def _summed(train: StepTrain, values: Callable[[Array], Array], reach: int) -> Array:
     """Sum of signed values about every step, up to ``reach`` samples from it."""
     index = np.floor(train.place).astype(np.int64)[:, None] + np.arange(-reach, reach)[None, :]
     signed = values(train.taken(index) - train.place[:, None]) * train.sign[:, None]
-    inside = (index >= train.low) & (index <= train.high)
-    return np.bincount(index[inside] - train.low, weights=signed[inside], minlength=train.count)
+    # Steps lie within the samples, so that what is summed reaches at most ``reach`` beyond them.
+    count = train.count
+    padded = np.bincount((index - (train.low - reach - 1)).ravel(), signed.ravel(), count + 2 * reach + 2)
+    return padded[reach + 1 : reach + 1 + count]
 
 
 def _taus() -> Array:
@@ -210,7 +216,9 @@ def fit_shape(mean: Array, powers: Array, scale: Array, train: StepTrain, width:
     wave = ground.wave(train)
     hats = _hats(train) * scale[:, None]
     count = powers.shape[1]
-    columns = [powers, powers * wave[:, None], (ground.widening(train) * scale)[:, None]]
+    reach = min(max(math.ceil(4 * width), 2), REACH)
+    widening = _summed(train, ground.widening, reach) * scale
+    columns = [powers, powers * wave[:, None], widening[:, None]]
     if fields:
         odd = (np.arange(train.low, train.high + 1) % 2).astype(np.float64)
         steep = _summed(train, ground.slope, REACH) * scale
@@ -224,15 +232,18 @@ def fit_shape(mean: Array, powers: Array, scale: Array, train: StepTrain, width:
     held[first:] = STIFFNESS * float(np.mean(scale**2))
     normal[np.diag_indices(normal.shape[0])] += held
     found = np.linalg.solve(normal, design.T @ mean)
-    wider = min(max(float(found[2 * count]), -0.3 * width), 0.3 * width)
+    wider = float(found[2 * count])
     lift, later = 0.0, 0.0
     if fields:
         lift, later = float(found[first - 3]), float(found[first - 2] - found[first - 1])
     correction = np.concatenate([[0.0], found[first:], [0.0]])
-    table = ground.table + np.interp(_taus(), np.arange(-BEFORE, AFTER + 1), correction)
+    taus = _taus()
+    table = ground.table + wider * ground.widening(taus)
+    table += np.interp(taus, np.arange(-BEFORE, AFTER + 1), correction)
+    next_width = min(max(width + wider, 0.7 * width, NARROWEST), 1.3 * width, WIDEST)
     return ShapeFit(
-        StepShape(table, width),
-        min(max(width + wider, NARROWEST), WIDEST),
+        StepShape(table, next_width),
+        next_width,
         train.lag + min(max(later, -0.3), 0.3),
         found[:count],
         found[count : 2 * count],
@@ -245,25 +256,23 @@ def _hats(train: StepTrain) -> Array:
     """Triangles one sample apart about every step, signed and summed: (n, BEFORE + AFTER - 1)."""
     place = train.place[:, None]
     index = np.ceil(train.place - BEFORE).astype(np.int64)[:, None] + np.arange(BEFORE + AFTER)[None, :]
-    where = np.clip(train.taken(index) - place + BEFORE, 0.0, BEFORE + AFTER)
-    cell = np.clip(where.astype(np.int64), 0, BEFORE + AFTER - 1)
+    where = np.minimum(np.maximum(train.taken(index) - place + BEFORE, 0.0), BEFORE + AFTER - 1e-9)
+    cell = where.astype(np.int64)
     part = where - cell
-    row = index - train.low
-    inside = (row >= 0) & (row < train.count)
     nodes = BEFORE + AFTER + 1
-    flat = (row * nodes + cell)[inside]
-    signed = np.broadcast_to(train.sign[:, None], row.shape)[inside]
-    later = part[inside] * signed
-    size = train.count * nodes
-    hats = np.bincount(flat, weights=signed - later, minlength=size)
-    hats += np.bincount(flat + 1, weights=later, minlength=size)
-    return np.asarray(hats.reshape(train.count, nodes)[:, 1:-1])
+    flat = ((index - (train.low - AFTER - 1)) * nodes + cell).ravel()
+    signed = np.broadcast_to(train.sign[:, None], index.shape).ravel()
+    later = part.ravel() * signed
+    size = (train.count + 2 * AFTER + 2) * nodes
+    hats = np.bincount(flat, signed - later, size) + np.bincount(flat + 1, later, size)[:size]
+    return np.asarray(hats.reshape(-1, nodes)[AFTER + 1 : AFTER + 1 + train.count, 1:-1])
 
 
 def spot_width(flat: Array, train: StepTrain) -> float:
     """Width in samples of the Gaussian spot as steep as the steps of bars between 0 and 1."""
-    index = np.clip(np.floor(train.place).astype(np.int64) - train.low, 1, flat.size - 3)
-    rise = float(np.median((flat[index + 2] - flat[index - 1]) * train.sign))  # over three samples
+    index = np.minimum(np.maximum(np.floor(train.place).astype(np.int64) - train.low, 1), flat.size - 3)
+    rises = np.sort((flat[index + 2] - flat[index - 1]) * train.sign)  # over three samples
+    rise = float(rises[rises.size // 2])
     half = min(max(rise / 2.0, 0.08), 0.498)
     return max(1.5 / float(ndtri(0.5 + half)), NARROWEST)
 
