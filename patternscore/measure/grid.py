@@ -34,15 +34,14 @@ _FEWEST = 24  # crossings
 class GridTrace:
     """Crossings against the best-fitting ideal grid, frame coordinates, and the parts of their error.
 
-    ``ideal`` and ``found`` are (n, 2); ``left_over`` (n, 2) is what the adjustable distortions do not
-    explain, in samples and lines; ``parts`` names each adjustable part and its size with unit.
+    ``ideal`` and ``found`` are (n, 2); ``model`` takes the error apart into what a person can adjust
+    (``model.parts()``) and what is left over.
     """
 
     index: Array
     ideal: Array
     found: Array
-    left_over: Array
-    parts: dict[str, tuple[float, str]]
+    model: Geometry
 
 
 def read_grid(frame: Frame, located: Located) -> Findings:
@@ -58,8 +57,7 @@ def read_grid(frame: Frame, located: Located) -> Findings:
     try:
         crossings = _enough(located.crossings)
         model = fit_geometry(crossings, frame.raster)
-        readings = model.readings()
-        for key, unit, estimate in readings:
+        for key, unit, estimate in model.readings():
             findings.add(key, unit, estimate, "crosshatch")
         error, ideal = position_error(crossings, frame.raster, model.shared)
         findings.add("position_error", "% of PH", error, "crosshatch")
@@ -116,7 +114,7 @@ class Axis:
         table = _terms(own, other)
         target = table @ self.terms
         seen = target.copy()
-        for _ in range(8):
+        for _ in range(5):
             seen = seen - (seen + self._bend(seen) - target) / self._rate(seen)
         powers = np.stack([seen**k for k in _SWEEP], -1)
         return seen, np.concatenate([table, -powers], -1) / self._rate(seen)[..., None]
@@ -241,9 +239,9 @@ class Geometry:
             ]
         return found
 
-    def parts(self, readings: list[tuple[str, str, Estimate]]) -> dict[str, tuple[float, str]]:
+    def parts(self) -> dict[str, tuple[float, str]]:
         """All that a person can adjust, by name, with its unit."""
-        both = (*self.sweep_readings(), *readings)
+        both = (*self.sweep_readings(), *self.readings())
         return {key: (estimate.value, unit) for key, unit, estimate in both}
 
 
