@@ -61,9 +61,7 @@ def read_grid(frame: Frame, located: Located) -> Findings:
             findings.add(key, unit, estimate, "crosshatch")
         error, ideal = position_error(crossings, frame.raster, model.shared)
         findings.add("position_error", "% of PH", error, "crosshatch")
-        findings.traces["grid"] = GridTrace(
-            crossings.index, ideal, crossings.found, model.left_over, model.parts(readings)
-        )
+        findings.traces["grid"] = GridTrace(crossings.index, ideal, crossings.found, model)
     except Unreadable as why:
         findings.miss(why.reason, *KEYS)
     return findings
@@ -134,12 +132,12 @@ class Axis:
         """
         half = float(self.terms[1] + self.terms[5] * across)
         inner = self.covariance[: len(_TERMS), : len(_TERMS)]
-        sigma = float(weights @ inner @ weights) ** 0.5
+        sigma = float(np.sqrt(weights @ inner @ weights))
         return Estimate(float(weights @ self.terms) / half, sigma / abs(half))
 
     def spread(self, gradient: Array) -> float:
         """Standard deviation of a quantity with this gradient by all coefficients."""
-        return max(float(gradient @ self.covariance @ gradient), 0.0) ** 0.5
+        return float(np.sqrt(np.clip(gradient @ self.covariance @ gradient, 0.0, None)))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
