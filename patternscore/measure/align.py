@@ -10,7 +10,8 @@ import numpy as np
 import numpy.typing as npt
 
 from patternscore.errors import Unreadable
-from patternscore.measure.profile import FEWEST, LOWEST, Strip, slope_of, table
+from patternscore.measure.profile import slope_of, table
+from patternscore.measure.strip import FEWEST, LOWEST, Strip
 
 Array = npt.NDArray[np.float64]
 UNLEVEL = 0.1  # IRE rms between the rows that is left alone
@@ -69,13 +70,18 @@ def _basis(rows: npt.NDArray[Any], degree: int, parity: bool) -> Array:
     return np.asarray(np.linalg.qr(np.stack(columns, axis=1))[0])
 
 
-def settle(strip: Strip) -> None:
+def settle(strip: Strip, limits: tuple[float, float]) -> None:
     """Cut the windows; find polarity, levels and a first run of every edge by the area under its step.
+
+    Parameters
+    ----------
+    limits : (low, high)
+        Levels in IRE at and beyond which samples are clipped.
 
     Raises
     ------
     Unreadable
-        If there is no step to be seen.
+        If there is no step to be seen, or only a clipped one.
     """
     for round_ in range(MOST_CUTS):
         strip.cut()
@@ -87,6 +93,8 @@ def settle(strip: Strip) -> None:
         strip.middle, strip.step = _levels(first, last)
         if np.min(strip.step) < LOWEST:
             raise Unreadable("there is no step to be seen where the plan has an edge")
+        if strip.clipped_at(limits):
+            raise Unreadable("the levels beside the edge are clipped")
         if round_ == 0:
             keep = _whole_rows(strip, after - before)
             before, after = before[:, keep], after[:, keep]

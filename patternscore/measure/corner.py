@@ -13,9 +13,10 @@ from patternscore.measure.align import refine, settle
 from patternscore.measure.design import lay_out
 from patternscore.measure.family import relative, spotted
 from patternscore.measure.fitedge import FittedEdge
-from patternscore.measure.profile import Pile, Run, Strip, coding_of, cut_strip, pile_up, slope_of
+from patternscore.measure.profile import Pile, coding_of, pile_up, slope_of
 from patternscore.measure.response import Response
 from patternscore.measure.stepbasis import edge_of, step_basis
+from patternscore.measure.strip import Run, Strip, cut_strip
 
 Array = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
@@ -54,10 +55,11 @@ def fit_corners(frame: Frame, blocks: dict[str, list[Run]], centre: FittedEdge) 
     the profile is part of the model.
     """
     strips: dict[str, Strip] = {}
+    coding = coding_of(frame)
     for place, runs in blocks.items():
         try:
             strip = cut_strip(frame, runs)
-            settle(strip)
+            settle(strip, coding.limits)
         except Unreadable:
             continue
         strips[place] = strip
@@ -66,7 +68,7 @@ def fit_corners(frame: Frame, blocks: dict[str, list[Run]], centre: FittedEdge) 
     left, right = (min(getattr(strip, side) for strip in strips.values()) for side in ("left", "right"))
     for strip in strips.values():
         strip.narrow(left, right)
-    coding, gain = coding_of(frame), centre.response.gain
+    gain = centre.response.gain
     shelf: _Shelf | None = None
     found = {}
     shaky = centre.alignment.jitter > SHAKY

@@ -8,8 +8,9 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from patternscore.measure.profile import Pile, Strip, slope_of
+from patternscore.measure.profile import Pile, slope_of
 from patternscore.measure.stepbasis import BINS, sample_mean, step_basis
+from patternscore.measure.strip import Strip
 
 Array = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
@@ -17,6 +18,7 @@ Single = npt.NDArray[np.float32]
 Index = npt.NDArray[np.int64]
 
 NEAR = 6 * BINS  # bins each side of an edge that are taken one by one; further off whole samples will do
+FILLED = 0.9  # part of the bins that have to hold samples
 OFFSET = 0.007  # prior sigma of a profile's offset, fraction of the step: tilt, hum, an error of the levels
 FINELY = 60 * BINS  # lag in bins beyond which so little of an edge is left that the nearest bin will do
 FLOOR = 1e-5  # fraction of the step: what is left out of the model anyway
@@ -168,7 +170,9 @@ def _at(edge: Array, bins: Index, lags: Array) -> Array:
 def lay_out(strips: list[Strip], pile: Pile, *, neighbours: bool = True) -> Layout:
     """Choose the rows for some strips."""
     bins = pile.mean.shape[1]
-    span = min(NEAR, -pile.first, bins - 1 + pile.first)
+    side = min(-pile.first, bins - 1 + pile.first)
+    # An upright edge without jitter shows few phases: then there are no whole samples to take together.
+    span = side if np.count_nonzero(pile.count) < FILLED * pile.count.size else min(NEAR, side)
     half = BINS // 2
     near = np.arange(-span, span + 1) - pile.first
     before = np.arange(-span - 1 - half - pile.first, half - 1, -BINS)[::-1]
@@ -231,7 +235,7 @@ def _neighbours(strips: list[Strip]) -> tuple[tuple[Neighbour, ...], Array, Arra
     return tuple(found), np.concatenate(signs), np.concatenate(lags)
 
 
-def _coarse_sum(values: Array, coarse: Index) -> Any:
+def _coarse_sum(values: npt.NDArray[Any], coarse: Index) -> Any:
     """Sum over the sample about each coarse bin, the outer bins counting half."""
     half = BINS // 2
     total = (values[:, coarse - half] + values[:, coarse + half]) / 2
@@ -244,12 +248,12 @@ def _rows(layout: Layout, pile: Pile, code: float, residue: float) -> tuple[Arra
     """Data and weights of all rows."""
     near, coarse, share = layout.near, layout.coarse, layout.share
     sound = (pile.count > 0) & ~pile.clipped
-    whole = np.maximum(pile.count, 1.0)
+    whole: Array = np.maximum(pile.count, 1.0)
     fine = (pile.mean[:, near] * share).sum(axis=0)
     worth = 1.0 / np.maximum((share**2 / whole[:, near]).sum(axis=0), 1e-9)
     rise = slope_of(fine) / (BINS * max(code, 1e-9))
     far = _coarse_sum(pile.mean, coarse) / BINS
-    far_worth = BINS**2 / _coarse_sum(np.asarray(1.0 / whole), coarse)
+    far_worth = BINS**2 / _coarse_sum(1.0 / whole, coarse)
     far_rise = slope_of(far) / (BINS * max(code, 1e-9))
     keep = np.concatenate([share.sum(axis=0) > 0, (_coarse_sum(sound * 1.0, coarse) > BINS - 0.1).ravel()])
     count = np.concatenate([worth, far_worth.ravel()])

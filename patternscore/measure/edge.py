@@ -16,7 +16,7 @@ from patternscore.located import Located
 from patternscore.measure.corner import fit_corners
 from patternscore.measure.esf import EdgeSpread, TransferCurve, edge_spread, transfer_curve
 from patternscore.measure.fitedge import FittedEdge, fit_edges
-from patternscore.measure.profile import Run, lay_runs
+from patternscore.measure.strip import Run, lay_runs
 from patternscore.reading import Estimate, Findings
 
 Array = npt.NDArray[np.float64]
@@ -36,6 +36,7 @@ ALONG = (
     "preshoot",
     "ringing",
 )
+GUESSED = 1.0  # sigma in percent of the step from which a level beyond the coding range is not known
 HIGHEST_ACROSS = 1.0  # cycles per line up to which the slant of the edges shows the response across the lines
 
 
@@ -109,6 +110,8 @@ def _fit(frame: Frame, runs: dict[str, Run], axis: str) -> FittedEdge | str:
         return fit_edges(frame, blocks, across=axis == "v")
     except Unreadable as reason:
         return reason.reason
+    except np.linalg.LinAlgError:
+        return "no response fits what is seen of the edges"
 
 
 def _blocks(runs: dict[str, Run], place: str, axis: str) -> list[list[Run]]:
@@ -155,8 +158,8 @@ def _read_along(
         _take(findings, f"response_{mhz}mhz", "dB", "centre", partial(curve.decibels, float(mhz)))
     _take(findings, "flatness", "dB", "centre", partial(curve.flatness, 0.5, standard.luma_mhz))
     _take(findings, "rise_time", "ns", "centre", spread.rise_time)
-    _take(findings, "overshoot", "%", "centre", spread.overshoot)
-    _take(findings, "preshoot", "%", "centre", spread.preshoot)
+    _take(findings, "overshoot", "%", "centre", partial(_unclipped, spread.overshoot, fitted))
+    _take(findings, "preshoot", "%", "centre", partial(_unclipped, spread.preshoot, fitted))
     poles = fitted.poles and Estimate(fitted.poles.value * rate, fitted.poles.sigma * rate)
     _take(findings, "ringing", "MHz", "centre", partial(spread.ringing, poles))
     ns = 1e3 / rate
@@ -173,6 +176,14 @@ def _read_along(
         line_shifts=alignment.raw / rate,
         line_sigma=alignment.row_sigma / rate,
     )
+
+
+def _unclipped(read: Callable[[], Estimate], fitted: FittedEdge) -> Estimate:
+    """Give a reading of the highest or lowest level, unless that is only guessed beyond the coding range."""
+    found = read()
+    if fitted.pile.clipped.any() and found.sigma > GUESSED:
+        raise Unreadable("the edge swings beyond the coding range")
+    return found
 
 
 def _read_across(findings: Findings, frame: Frame, fitted: FittedEdge, along: FittedEdge | str) -> TransferCurve:

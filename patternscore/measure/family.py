@@ -206,9 +206,9 @@ def nearest(window: Array, left: int, right: int, *, used: npt.NDArray[np.bool_]
     seen = np.where(used, window, 0.0)
     inner = np.stack([np.full(len(shelf.starts), seen.sum()), shelf.edges @ seen, shelf.slopes @ seen], axis=1)
     found = np.linalg.solve(gram, inner[..., None])[..., 0]
-    left: Array = float(seen @ seen) - np.asarray(np.einsum("ka,ka->k", found, inner))
-    left = np.where(shelf.unlimited, UNUSUAL * left, left)
-    best = int(np.argmin(left))
+    misfit: Array = float(seen @ seen) - np.asarray(np.einsum("ka,ka->k", found, inner))
+    misfit = np.where(shelf.unlimited, UNUSUAL * misfit, misfit)
+    best = int(np.argmin(misfit))
     _, step, shift = found[best]
     start = shelf.starts[best]
     theta = start.theta.copy()

@@ -12,12 +12,14 @@ from patternscore.frame import Frame
 from patternscore.measure.align import Alignment, refine, settle
 from patternscore.measure.design import design, lay_out
 from patternscore.measure.family import Family, Start, around, nearest, pole_frequency
-from patternscore.measure.profile import Pile, Run, Strip, coding_of, cut_strip, pile_up
+from patternscore.measure.profile import Coding, Pile, coding_of, pile_up
 from patternscore.measure.response import Response, fit, modelled
 from patternscore.measure.stepbasis import BINS, edge_of
+from patternscore.measure.strip import Run, Strip, cut_strip
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[np.float64]
+NOISIEST = 0.4  # rms of a sample, fraction of the step, from which nothing is read
 MISFIT = 2.5  # chi2 per degree of freedom above which another round is worth its time
 FAR = 0.25  # samples of a move after which another is made: the step was no longer a small one
 ROUNDS, ROUNDS_ACROSS = 3, 2
@@ -81,8 +83,8 @@ def fit_edges(frame: Frame, blocks: list[list[Run]], *, across: bool) -> FittedE
     Edges are first brought into step by their areas, then by the nearest of a library of profiles. Where the
     code is coarse against the noise, or the fit leaves too much, it is done again with what has been learnt.
     """
-    strips = _strips(frame, blocks)
     coding = coding_of(frame)
+    strips = _strips(frame, blocks, coding)
     scale = float(np.mean(np.concatenate([strip.step for strip in strips])))
     pile = pile_up(strips, coding)
     start = _begin(strips, pile, across=across)
@@ -90,6 +92,8 @@ def fit_edges(frame: Frame, blocks: list[list[Run]], *, across: bool) -> FittedE
     layout = lay_out(strips, pile, neighbours=not across)
     model = layout.profiles(edge_of(family.shape(family.start)[0], layout.reach(0)))
     alignment = _refine(strips, model, jitter=not across)
+    if alignment.noise > NOISIEST:
+        raise Unreadable("the edge is lost in the noise")
     coding = coding.with_noise(pile.noise * scale)
     pile = pile_up(strips, coding, model)
     layout = lay_out(strips, pile, neighbours=not across)
@@ -119,13 +123,13 @@ def _poles(response: Response, scale: float) -> Estimate | None:
     return Estimate(value, float(np.sqrt(max(float(slopes @ covariance @ slopes), 0.0))))
 
 
-def _strips(frame: Frame, blocks: list[list[Run]]) -> list[Strip]:
+def _strips(frame: Frame, blocks: list[list[Run]], coding: Coding) -> list[Strip]:
     """Strips of the blocks that can be read, all with the same window."""
     strips, reason = [], "the pattern has no edge for it"
     for runs in blocks:
         try:
             strip = cut_strip(frame, runs)
-            settle(strip)
+            settle(strip, coding.limits)
             strips.append(strip)
         except Unreadable as failed:
             reason = failed.reason
