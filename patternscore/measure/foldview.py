@@ -185,12 +185,12 @@ def _content(plan: Plan, ruler: Ruler, covered: tuple[float, float], side: Side)
         walls, bits = 1.0 - walls[::-1], bits[::-1]
     if walls[0] > 1e-6:  # the corner belongs to the ruler that runs along this edge
         walls = np.concatenate([[0.0], walls])
-        bits = np.concatenate([[_corner(plan, covered, side)], bits])
+        bits = np.concatenate([[corner_level(plan, covered, side)], bits])
     keep = np.concatenate([[True], bits[1:] != bits[:-1]]) & (walls[:-1] < DEPTH)
     return walls[:-1][keep], bits[keep]
 
 
-def _corner(plan: Plan, covered: tuple[float, float], side: Side) -> float:
+def corner_level(plan: Plan, covered: tuple[float, float], side: Side) -> float:
     """Mean level, 0 to 1, of the crossing ruler's bars within what was taken of a band."""
     crossing = next((other for other in plan.rulers if other.side == side), None)
     if crossing is None:

@@ -69,9 +69,14 @@ class Bars:
     @property
     def level(self) -> Array:
         """Levels along the strip: 0 for dark bars, 1 for light ones, the fields made alike."""
-        count = self.strip.mean.size
-        powers = _powers(count)
-        lifted = self.strip.mean - powers @ self.base - self.lift * (np.arange(count) % 2)
+        return self.level_of(0, self.strip.mean.size)
+
+    def level_of(self, low: int, high: int) -> Array:
+        """Levels from index ``low`` up to but not including ``high``."""
+        powers = _powers(self.strip.mean.size)[low:high]
+        lifted = self.strip.mean[low:high] - powers @ self.base
+        if self.lift:
+            lifted -= self.lift * (np.arange(low, high) % 2)
         return np.asarray(lifted / (powers @ self.swing))
 
     @property

@@ -13,6 +13,7 @@ from patternscore.errors import Unreadable
 from patternscore.frame import Frame
 from patternscore.located import Located
 from patternscore.measure.fold import PLAIN, Fold, find_fold, no_fold, suspect
+from patternscore.measure.foldglance import nothing_there
 from patternscore.measure.foldview import FAR, view_edge
 from patternscore.measure.ruler import Bars, read_bars, sharpen
 from patternscore.measure.rulerband import Axis, Bend, axis_of, straighten
@@ -148,8 +149,9 @@ def _folds(
     folds: dict[str, Fold] = {}
     for side, start in zip(SIDES[axis], nominal, strict=True):
         try:
-            view = view_edge(located.plan, bars, side, start, scan.late, wary=False)
-            plain = suspect(view)
+            plain = 0.0
+            if not nothing_there(located.plan, bars, scan, side, start):
+                plain = suspect(view_edge(located.plan, bars, side, start, scan.late, wary=False))
             if plain < PLAIN:
                 fold = no_fold(plain, scan.edge_sigma)
             else:
