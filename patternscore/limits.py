@@ -12,7 +12,9 @@ from pathlib import Path
 from typing import Any
 
 from patternscore.errors import UsageError
+from patternscore.files import shown
 from patternscore.keys import KEYS
+from patternscore.tomlfile import read_toml
 
 _FIELDS = {"full", "none", "target", "marks"}
 
@@ -50,14 +52,8 @@ def read_limits(path: Path | str) -> Limits:
     UsageError
         When the file cannot be read, or names an unknown reading or field.
     """
-    path = Path(path)
-    try:
-        table = tomllib.loads(path.read_text("utf-8"))
-    except OSError as error:
-        raise UsageError(f"{path.name}: cannot be read ({error.strerror}); name a TOML file of limits") from None
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
-        raise UsageError(f"{path.name}: not TOML ({error}); write lines such as [overshoot] and full = 3") from None
-    return dict(shipped_limits()) | dict(_parse(table, path.name, shipped_limits()))
+    table, _ = read_toml(path, "limits file")
+    return dict(shipped_limits()) | dict(_parse(table, shown(Path(path).name), shipped_limits()))
 
 
 def _parse(table: dict[str, Any], name: str, known: Limits | None = None) -> Limits:
@@ -71,12 +67,12 @@ def _nearest(word: str, words: set[str] | Mapping[str, Any]) -> str:
 
 def _limit(key: str, entry: Any, name: str, before: Limit | None) -> Limit:
     if key not in KEYS:
-        raise UsageError(f"{name}: {key} is no reading; {_nearest(key, KEYS)}")
+        raise UsageError(f"{name}: {shown(key)[:40]} is no reading; {_nearest(key, KEYS)}")
     if not isinstance(entry, dict):
         raise UsageError(f"{name}: {key} needs full and none; write [{key}] and a line for each")
     for field in entry:
         if field not in _FIELDS:
-            raise UsageError(f"{name}: [{key}] has no field {field}; {_nearest(field, _FIELDS)}")
+            raise UsageError(f"{name}: [{key}] has no field {shown(field)[:40]}; {_nearest(field, _FIELDS)}")
     values: dict[str, Any] = {}
     if before is not None:
         values = {"full": before.full, "none": before.none, "target": before.target, "marks": before.marks}
@@ -89,7 +85,7 @@ def _limit(key: str, entry: Any, name: str, before: Limit | None) -> Limit:
     if values["full"] == values["none"]:
         raise UsageError(f"{name}: [{key}] has one value for full and none; make them differ")
     if not isinstance(values.get("marks", True), bool):
-        raise UsageError(f"{name}: [{key}] marks must be true or false")
+        raise UsageError(f"{name}: [{key}] marks must be true or false; write marks = true")
     target = values.get("target")
     return Limit(
         float(values["full"]),
