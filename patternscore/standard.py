@@ -87,11 +87,12 @@ class Standard:
 
         Along the line the active line is centred on the frame (BT.601 puts it there within half a
         sample). Down the frame the picture fills all lines, at most ``picture_lines`` where the frame
-        has more than the coded ones.
+        has more than the coded ones; with more lines than the standard has, it was scaled and fills all.
         """
         half = self.active_us * sample_rate / 2
         middle = (samples - 1) / 2
-        tall = rows if rows <= max(self.coded_lines, self.picture_lines) else self.picture_lines
+        spare = max(self.coded_lines, self.picture_lines) < rows <= self.lines
+        tall = self.picture_lines if spare else rows
         centre = (rows - 1) / 2
         return Raster(middle - half, middle + half, centre - tall / 2, centre + tall / 2)
 

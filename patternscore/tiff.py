@@ -97,7 +97,7 @@ def _own(page: Any, name: str) -> npt.NDArray[Any]:
     if pixels.ndim > 3 or pixels.shape[:2] != (page.imagelength, page.imagewidth):
         raise UnscorableFrame(f"{name}: is a volume and no picture; save its frames as pages")
     if photometric == _PALETTE:
-        return np.asarray(page.colormap, dtype=np.uint16).T[pixels]
+        return np.asarray(np.asarray(page.colormap, dtype=np.uint16).T[pixels])
     bits = int(page.bitspersample)
     if bits < 8:
         pixels = (pixels.astype(np.uint16) * 255 // (2**bits - 1)).astype(np.uint8)
