@@ -24,6 +24,7 @@ KNOWN_START, KNOWN_RATIO, KNOWN_TURN = (0.0, 0.15), (np.log(4.8), 0.6), (np.log(
 # Where the scanned picture is the whole chart, the scan turns at its very edge: as likely as all other places
 # together. AT_EDGE is how near (bars), FAVOUR what that is worth in chi-squared.
 AT_EDGE, FAVOUR = 0.03, 8.0
+CLEARLY = 0.5  # bars: a turn farther off the edge than this is not tried at it
 # From grab to grab the mean over kinds moves by this part of their spread, and each fit by this much (bars).
 CHANGES, SETTLED = 0.17, 0.002
 STEPS = np.array([0.02, 0.02, 0.02, 0.05])
@@ -102,8 +103,10 @@ def _explore(problem: _Problem) -> list[_Endings]:
     best = min(shared, key=lambda ending: float(ending.cost.min()))
     found = problem.parameters(best.best(1))
     turned = problem.free(np.concatenate([with_turn(found, length * view.bar) for length in LENGTHS]))
-    kinds = [_Kind(best.kind.looks, turn, at_edge) for turn in TURNS for at_edge in (False, True)]
-    return [*shared, *(problem.descend(turned, kind, 9) for kind in kinds)]
+    free = [problem.descend(turned, _Kind(best.kind.looks, turn), 6) for turn in TURNS]
+    if abs(float(problem.bottom(found, best.kind)[0, 0])) > CLEARLY:
+        return [*shared, *free]
+    return [*shared, *free, *(problem.descend(turned, _Kind(best.kind.looks, turn, True), 6) for turn in TURNS)]
 
 
 class _Problem:
@@ -135,9 +138,13 @@ class _Problem:
         parameters = self.parameters(free)
         levels = [folded(look, parameters, kind.turn) for look in kind.looks]
         departure = (np.concatenate(levels, axis=1) - self.target) / self.unit
-        bottom = lowest(kind.looks[0], parameters, kind.turn)[0] * kind.looks[0].band.slope(0.0) / self.view.bar
-        pinned = bottom / AT_EDGE if kind.at_edge else np.zeros_like(bottom)
+        pinned = self.bottom(parameters, kind) / AT_EDGE if kind.at_edge else np.zeros((free.shape[0], 1))
         return np.concatenate([departure, (free - self.known) * self.pull, pinned], axis=1)
+
+    def bottom(self, parameters: Array, kind: _Kind) -> Array:
+        """Where the scan turns, bars from the picture's edge, (c, 1)."""
+        look = kind.looks[0]
+        return np.asarray(lowest(look, parameters, kind.turn)[0] * look.band.slope(0.0) / self.view.bar)
 
     def slopes(self, free: Array, kind: _Kind, left: Array) -> Array:
         """Slopes of the departures by each free parameter, (c, 4, n)."""

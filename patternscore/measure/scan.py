@@ -152,7 +152,7 @@ def _folds(
             plain = 0.0
             if not nothing_there(located.plan, bars, scan, side, start):
                 plain = suspect(view_edge(located.plan, bars, side, start, scan.late, wary=False))
-            if plain < PLAIN:
+            if plain < PLAIN[axis]:
                 fold = no_fold(plain, scan.edge_sigma)
             else:
                 sharp = bars if shape is not None else sharpen(bars)
