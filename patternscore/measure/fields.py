@@ -16,7 +16,8 @@ from patternscore.plan import Edge
 from patternscore.reading import Estimate
 
 Array = npt.NDArray[Any]
-_ENDS = 3  # samples or lines at each end of a cut that give the edge's two levels
+_ENDS = 3  # samples, or lines, at each end of a cut that give the edge's two levels
+_LEAST_STEP = 5.0  # IRE
 
 
 @dataclass(frozen=True, slots=True)
@@ -69,30 +70,35 @@ def field_difference(frame: Frame, located: Located) -> FieldDifference:
     The place of an edge in a cut through it is the area under the cut over its step, which needs no shape
     of the edge; a slanted edge meets the lines at all phases, so that lines of one field alone do.
     """
-    down, along = [], []
-    centre = [edge for edge in located.plan.edges if edge.place == "centre"]
-    for edge in centre:
-        cut = _cut(frame, located, edge)
+    level = _level(frame, located)
+    edges = [edge for edge in located.plan.edges if edge.place == "centre"]
+    if not edges:
+        raise Unreadable("the pattern has no edges at its centre")
+    parts = np.linspace(0.0, 1.0, 7)[1:-1, None]
+    runs = [np.add(edge.start, parts * np.subtract(edge.end, edge.start)) for edge in edges]
+    places = located.warp.to_frame(np.concatenate(runs)).reshape(len(edges), -1, 2)
+    down, along, slopes = [], dict[str, list[tuple[Array, Array]]](), []
+    for edge, run in zip(edges, places, strict=True):
+        cut = _cut(frame, edge, run)
         if cut is None:
             continue
         if edge.axis == "v":
             lines, cuts = cut
-            down.append(_place(lines, cuts, 1) - _place(lines, cuts, 0))
+            cuts[lines % 2 == 1] -= level.value  # a field that is lighter would seem to lie elsewhere
+            down.append(float(np.mean(_place(lines, cuts, 1) - _place(lines, cuts, 0))))
         else:
-            along.append(_across_rows(*cut))
-    return FieldDifference(_mean(down), _mean(along), _level(frame, located))
+            found = _places_in_rows(cut[1])
+            if found is not None:
+                along.setdefault(edge.block, []).append((cut[0], found))
+                slopes.append((run[-1, 0] - run[0, 0]) / (run[-1, 1] - run[0, 1]))
+    if len(down) < 2:
+        raise Unreadable("too few near-horizontal edges of the pattern are in the frame")
+    moved = Estimate(float(np.median(down)), float(1.25 * np.std(down) / np.sqrt(len(down))))
+    return FieldDifference(moved, _along(along, -moved.value * float(np.mean(slopes or [0.0]))), level)
 
 
-def _mean(values: list[Any]) -> Estimate:
-    if len(values) < 2:
-        raise Unreadable("too few edges of the pattern are in the frame")
-    found = np.array([np.mean(value) for value in values])
-    return Estimate(float(np.median(found)), float(1.25 * np.std(found) / np.sqrt(len(found))))
-
-
-def _cut(frame: Frame, located: Located, edge: Edge) -> tuple[Array, Array] | None:
-    """Cuts across an edge: for "v" (first line, (n, samples)), for "h" (rows, (rows, n)); None off the frame."""
-    run = located.warp.to_frame(np.linspace(edge.start, edge.end, 7)[1:-1])
+def _cut(frame: Frame, edge: Edge, run: Array) -> tuple[Array, Array] | None:
+    """Cuts across an edge: its lines or rows with, for "v", (lines, n) and, for "h", (rows, n); None off the frame."""
     axis = 1 if edge.axis == "v" else 0
     size = frame.raster.height_lines if axis else frame.raster.width_samples
     reach = int(min(0.45 * min(edge.clear_before, edge.clear_after) * size, 14))
@@ -115,13 +121,41 @@ def _place(lines: Array, cuts: Array, parity: int) -> Array:
     return np.asarray(lines[own][0] - 1.0 + 2.0 * part.sum(0))
 
 
-def _across_rows(rows: Array, cuts: Array) -> Array:
-    """Shift along the line of odd against even rows, samples."""
-    before, after = cuts[:, :_ENDS].mean(), cuts[:, -_ENDS:].mean()
-    place = ((cuts - after) / (before - after)).sum(1)
-    design = np.stack([np.ones(len(rows)), rows - rows.mean(), (rows - rows.mean()) ** 2, rows % 2], 1)
-    solved, *_ = np.linalg.lstsq(design, place, rcond=None)
-    return np.asarray(solved[3])
+def _places_in_rows(cuts: Array) -> Array | None:
+    """Place of the edge in each row, samples from the middle of the cut; None where a field shows no edge there.
+
+    Taken from the middle level, so that the step, known for each field only, hardly counts.
+    """
+    before, after = cuts[:, :_ENDS].mean(1), cuts[:, -_ENDS:].mean(1)
+    step = np.empty(len(cuts))
+    for parity in (0, 1):
+        step[parity::2] = (before - after)[parity::2].mean()
+    if np.abs(step).min() < _LEAST_STEP:
+        return None
+    return np.asarray((cuts - (before + after)[:, None] / 2).sum(1) / step)
+
+
+def _along(blocks: dict[str, list[tuple[Array, Array]]], slanted: float) -> Estimate:
+    """Shift along the line of odd against even rows, samples, without what slanted edges make of a shift down.
+
+    Edges of a block share rows, and so their jitter: they are averaged row by row before the scatter is taken.
+    """
+    found = []
+    for block in blocks.values():
+        first, last = max(rows[0] for rows, _ in block), min(rows[-1] for rows, _ in block)
+        if last - first < 16:
+            continue
+        rows = np.arange(first, last + 1)
+        place = np.mean([places[first - own[0] : last + 1 - own[0]] for own, places in block], axis=0)
+        bend = (rows - rows.mean()) / len(rows)
+        design = np.stack([np.ones(len(rows)), bend, bend**2, rows % 2], 1)
+        solved, *_ = np.linalg.lstsq(design, place, rcond=None)
+        left = place - design @ solved
+        found.append((solved[3], float(left @ left) / (len(rows) - 4) * 4.0 / len(rows)))
+    if not found:
+        raise Unreadable("too few near-vertical edges of the pattern are in the frame")
+    shifts, variances = np.array(found).T
+    return Estimate(float(shifts.mean() - slanted), float(np.sqrt(variances.sum()) / len(found)))
 
 
 def _level(frame: Frame, located: Located) -> Estimate:
