@@ -110,7 +110,10 @@ def _check_alike(first: Frame, other: Frame) -> None:
             )
     moved = displacement(first.luma, other.luma)
     if moved.likeness < _LEAST_LIKE:
-        raise UnscorableFrame(f"{other.name}: shows another picture than {first.name}; give grabs of one picture")
+        raise UnscorableFrame(
+            f"{other.name}: shows another picture than {first.name}, or one that has moved; "
+            "give grabs of one picture that stands still"
+        )
     if abs(moved.along) > _FARTHEST[0] or abs(moved.down) > _FARTHEST[1]:
         raise UnscorableFrame(
             f"{other.name}: lies {abs(moved.along):.1f} samples and {abs(moved.down):.1f} lines from "

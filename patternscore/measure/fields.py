@@ -77,7 +77,9 @@ def field_difference(frame: Frame, located: Located) -> FieldDifference:
     parts = np.linspace(0.0, 1.0, 7)[1:-1, None]
     runs = [np.add(edge.start, parts * np.subtract(edge.end, edge.start)) for edge in edges]
     places = located.warp.to_frame(np.concatenate(runs)).reshape(len(edges), -1, 2)
-    down, along, slopes = [], dict[str, list[tuple[Array, Array]]](), []
+    down: dict[str, list[float]] = {}
+    along: dict[str, list[tuple[Array, Array]]] = {}
+    slopes: list[float] = []
     for edge, run in zip(edges, places, strict=True):
         cut = _cut(frame, edge, run)
         if cut is None:
@@ -85,16 +87,25 @@ def field_difference(frame: Frame, located: Located) -> FieldDifference:
         if edge.axis == "v":
             lines, cuts = cut
             cuts[lines % 2 == 1] -= level.value  # a field that is lighter would seem to lie elsewhere
-            down.append(float(np.mean(_place(lines, cuts, 1) - _place(lines, cuts, 0))))
+            shift = float(np.mean(_place(lines, cuts, 1) - _place(lines, cuts, 0)))
+            down.setdefault(edge.block, []).append(shift)
         else:
             found = _places_in_rows(cut[1])
             if found is not None:
                 along.setdefault(edge.block, []).append((cut[0], found))
                 slopes.append((run[-1, 0] - run[0, 0]) / (run[-1, 1] - run[0, 1]))
-    if len(down) < 2:
-        raise Unreadable("too few near-horizontal edges of the pattern are in the frame")
-    moved = Estimate(float(np.median(down)), float(1.25 * np.std(down) / np.sqrt(len(down))))
+    moved = _down(down)
     return FieldDifference(moved, _along(along, -moved.value * float(np.mean(slopes or [0.0]))), level)
+
+
+def _down(blocks: dict[str, list[float]]) -> Estimate:
+    """Mean over blocks, which lean opposite ways: what moves along the line cancels, and is no scatter."""
+    found = [shifts for shifts in blocks.values() if len(shifts) > 1]
+    if not found:
+        raise Unreadable("too few near-horizontal edges of the pattern are in the frame")
+    variances = [np.var(shifts, ddof=1) / len(shifts) for shifts in found]
+    mean = np.mean([np.mean(shifts) for shifts in found])
+    return Estimate(float(mean), float(np.sqrt(np.sum(variances)) / len(found)))
 
 
 def _cut(frame: Frame, edge: Edge, run: Array) -> tuple[Array, Array] | None:
