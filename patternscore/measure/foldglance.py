@@ -19,6 +19,7 @@ Array = npt.NDArray[np.float64]
 NEAR = 0.11  # picture fraction from the edge that is glanced at
 SURE_EDGES = 4  # next to the edge, that must have been read
 SOFTEST = 1.6  # samples: a wider spot could smear a short fold away
+CALM = 0.2  # of the bars' contrast: ringing beside the picture's edge that is let pass
 TOLERANCE = 0.06  # of the bars' contrast
 
 
@@ -83,6 +84,16 @@ def _plain(plan: Plan, bars: Bars, scan: ScanMap, side: Side, start: float) -> b
     reached = bars.shape.at(taken[None, :] - places[:, None])
     left = bars.level_of(low, high) - (black + steps @ (1.0 - reached if far else reached))
     clear = 1.0 + bars.shape.width
-    counted = (np.abs(index - edge) > clear) & (np.abs(index - start) > clear if blanked else True)
+    counted = np.abs(index - edge) > clear
+    if blanked:
+        counted &= np.abs(index - start) > clear
+    if not _calm(bars.level_of(low, high)[~counted], black, float(levels[0])):
+        return False
     noise = float(np.sqrt(np.mean(strip.scatter[low:high] ** 2))) / bars.contrast
     return bool(np.abs(left[counted]).max(initial=0.0) < max(TOLERANCE, 6.0 * noise))
+
+
+def _calm(level: Array, black: float, outermost: float) -> bool:
+    """Whether samples about the picture's edge lie between black and its outermost level, or nearly so."""
+    low, high = min(black, outermost) - CALM, max(black, outermost) + CALM
+    return bool(np.all((level > low) & (level < high)))

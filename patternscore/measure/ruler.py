@@ -22,6 +22,7 @@ Array = npt.NDArray[np.float64]
 MOST_TURNS = 6
 REFITTED = 0.1  # samples: after larger moves the shape of the step is fitted anew
 SETTLED = 0.02  # samples: edges that move less than this need no further turn
+INNER = 0.12  # picture fraction at either end whose bars may be folded over
 CLEAR = 2.5  # samples between the edge of blanking and a bar edge that is not disturbed by it
 READMITTED = 1.5  # samples by which an edge at the end of a ruler may leave the run of the warp's error
 REACH = 5  # samples either side of its expected place within which an edge is sought
@@ -261,14 +262,33 @@ def _refine(
 
 
 def sharpen(bars: list[Bars]) -> list[Bars]:
-    """Give the rulers of one direction the step shape they share, finer than the first fit has it."""
-    lefts = []
+    """Make the most of the rulers of one direction before a look at a fold.
+
+    They are given the step shape they share, finer than the first fit has it, and levels that only bars well
+    inside the picture have a say in.
+    """
+    lefts, levelled = [], []
     for one in bars:
-        run = np.flatnonzero(one.good)
-        inner = slice(run[0], run[-1] + 1)
-        low = max(math.ceil(one.place[run[0]] - 3.0), 0)
-        high = min(math.floor(one.place[run[-1]] + 3.0), one.strip.mean.size - 1)
+        steady = np.flatnonzero(one.good & (one.at > INNER) & (one.at < 1.0 - INNER))
+        if steady.size < 10:
+            raise Unreadable(f"too little of the {one.strip.ruler.side} ruler was read to look for a fold")
+        inner = slice(steady[0], steady[-1] + 1)
+        low, high = math.ceil(one.place[steady[0]] - 3.0), math.floor(one.place[steady[-1]] + 3.0)
         train = StepTrain(low, high, one.place[inner], one.sign[inner], one.lag)
-        lefts.append((one.level[low : high + 1] - bars[0].shape.wave(train), train))
+        wave = one.shape.wave(train)
+        relevelled = _relevel(one, low, high, wave)
+        levelled.append(relevelled)
+        lefts.append((relevelled.level_of(low, high + 1) - wave, train))
     shape = finer_shape(bars[0].shape, lefts)
-    return [replace(one, shape=shape) for one in bars]
+    return [replace(one, shape=shape) for one in levelled]
+
+
+def _relevel(bars: Bars, low: int, high: int, wave: Array) -> Bars:
+    """Levels along the strip from the samples ``low`` to ``high``; along the line they change evenly."""
+    count = 2 if bars.strip.axis == "h" else 3
+    powers = _powers(bars.strip.mean.size)[low : high + 1, :count]
+    design = np.concatenate([powers, powers * wave[:, None]], axis=1)
+    lifted = bars.strip.mean[low : high + 1] - bars.lift * (np.arange(low, high + 1) % 2)
+    found = np.linalg.lstsq(design, lifted, rcond=None)[0]
+    rest = np.zeros(3 - count)
+    return replace(bars, base=np.concatenate([found[:count], rest]), swing=np.concatenate([found[count:], rest]))
