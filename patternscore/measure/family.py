@@ -225,6 +225,7 @@ def _member(
 
 def _along() -> list[Start]:
     shapes = [(0.69, 0.0, 0.0, 0.0), (0.1, 1.0, 0.0, 0.0), (0.1, 2.0, 1.0, 0.0), (0.1, 2.0, 1.0, 1.2)]
+    shapes += [(0.35, 0.8, 0.25, 0.0), (0.15, 1.3, 0.6, 0.0)]
     shapes += [(0.1, 2 * damping, 1.0, 0.0) for damping in (0.2, 0.3, 0.45, 0.65)]
     shapes += [(0.05, 2 * damping, 1.0, lead) for damping in (0.4, 0.6) for lead in (0.8, 1.6)]
     found = [

@@ -16,7 +16,10 @@ Array = npt.NDArray[np.float64]
 Single = npt.NDArray[np.float32]
 
 SHARP = 0.15  # codes of noise below which it shows where a code changes
-TRANSITION = 0.04  # codes by which such a place may be off: where samples happen to lie, errors of the slope
+TRANSITION = 0.08  # codes by which such a place may be off: where samples happen to lie, errors of the slope
+STRETCHED = 0.12  # codes by which the level between two such places may be off
+LATTICE = 6.0  # times more than so many independent ones samples on a lattice leave of rounding errors
+STEEP = 0.02  # fraction of the step that a profile rises over a bin, beyond which noise is not taken from it
 STILL = 0.1  # codes per sample below which a profile is a plateau
 
 
@@ -177,10 +180,12 @@ def _pile(first: int, sums: Array, model: Array | None, scale: _Scale) -> Pile:
     share = 1.0 / np.maximum(count, 1.0)
     mean = value * share
     variance = power * share - mean**2
-    # What the edge's own slope does within a bin, over which samples lie evenly, is no noise.
-    spread = variance - (slope_of(mean) / BINS) ** 2 / 12.0
-    free = float(count.sum() - np.count_nonzero(count))
-    noise = np.sqrt(max(float(np.vdot(spread, count)) / max(free, 1.0), 1e-10))
+    slope = slope_of(mean) / BINS
+    # What the edge's own slope does within a bin, over which samples lie evenly, is no noise; where it is steep
+    # too little is left to tell.
+    quiet = np.where(np.abs(slope) < STEEP, count, 0.0)
+    free = max(float(quiet.sum()) - np.count_nonzero(quiet), 1.0)
+    noise = np.sqrt(max(float(np.vdot(variance - slope**2 / 12.0, quiet)) / free, 1e-10))
     code = 1.0 / np.abs(scale.codes)
     flat = variance < (0.25 * code) ** 2
     rounding = None
@@ -190,35 +195,50 @@ def _pile(first: int, sums: Array, model: Array | None, scale: _Scale) -> Pile:
         # A bin holds the mean of a bent curve about its centre, not its value there.
         bent = mean - share * (off * rate + square * _bend_of(model) / 2.0)
         if scale.sharp:
-            bent, rounding = _between_codes(mean, bent, variance, share, rate / BINS, scale)
+            bent, rounding = _between_codes(mean, bent, variance, share, model, scale)
         mean = bent
     return Pile(first, count, mean, flat, clipped > 0, float(noise), rounding)
 
 
 def _between_codes(
-    mean: Array, bent: Array, variance: Array, share: Array, rise: Array, scale: _Scale
+    mean: Array, bent: Array, variance: Array, share: Array, model: Array, scale: _Scale
 ) -> tuple[Array, Array]:
     """Profile from the places where the code changes, and the variance that rounding leaves in it.
 
     Without noise a bin over which the level moves by less than a code says nothing of its level but where in
     it the code changes: there the level is the transition between two codes, and a part ``p`` of the samples
     beyond it tells how far from the centre that is. (Code transition levels are how the tests of converters
-    place a level, too.)
-
-    Parameters
-    ----------
-    rise : (edges, bins) array
-        How far the profile moves over a bin.
+    place a level, too.) From one such place to the next the level follows the model, stretched to fit both.
     """
     codes = np.abs(scale.codes)
     place = scale.middle + scale.codes * mean
     low = np.floor(place + 1e-4)
     part = place - low
     spread = variance * codes**2
-    moved = np.abs(rise) * codes
+    moved = np.abs(slope_of(model)) / BINS * codes
     between = (np.abs(spread - part * (1.0 - part)) < 0.02) & (spread > 1e-3) & (moved < 1.0)
     held = (spread < 1e-3) & (moved < 1.0)
-    at = (low + 0.5 + moved * (part - 0.5) - scale.middle) / scale.codes
-    left = (1.0 / (1.0 + moved**2) + share) / 12.0
+    at = np.where(between, (low + 0.5 + moved * (part - 0.5) - scale.middle) / scale.codes, bent)
+    left = (1.0 / (1.0 + moved**2) + LATTICE * share) / 12.0
     left = np.where(between, moved**2 * share / 12.0 + TRANSITION**2, np.where(held, 1.0 / 12.0, left))
-    return np.where(between, at, bent), left / codes**2
+    inner, stretched = _stretched(at, model, between, held, codes)
+    return np.where(inner, stretched, at), np.where(inner, STRETCHED**2, left) / codes**2
+
+
+def _stretched(at: Array, model: Array, between: Any, held: Any, codes: Array) -> tuple[Any, Array]:
+    """Which held bins lie between two transitions that differ, and the model there stretched to fit both."""
+    bins = np.arange(at.shape[1])
+    before = np.maximum.accumulate(np.where(between, bins, -1), axis=1)
+    after = np.minimum.accumulate(np.where(between, bins, at.shape[1])[:, ::-1], axis=1)[:, ::-1]
+    inner = held & (before >= 0) & (after < at.shape[1])
+    low, high = np.where(inner, before, 0), np.where(inner, after, 0)
+
+    def take(values: Array, where: Any) -> Array:
+        return np.take_along_axis(values, where, axis=1)
+
+    step, run = take(at, high) - take(at, low), take(model, high) - take(model, low)
+    apart = np.abs(step) * codes
+    inner &= (apart > 0.6) & (apart < 3.5) & (step * run > 0.25 * step**2)
+    part = (model - take(model, low)) / np.where(inner, run, 1.0)
+    inner &= (part > -0.05) & (part < 1.05)
+    return inner, take(at, low) + part * step

@@ -113,6 +113,12 @@ def _family(design: Design, family: Family, side: Array, prior: Array, steps: in
         normal = scaled @ scaled.T
         normal.flat[:: len(prior) + 1] += 1.0
         right = scaled @ rest - pull
+        # A parameter at its limit that would go beyond it stays there, and the others reckon with that.
+        stuck = np.flatnonzero(
+            ((theta <= family.lowest) & (right[:count] < 0)) | ((theta >= family.highest) & (right[:count] > 0))
+        )
+        normal[stuck], normal[:, stuck], right[stuck] = 0.0, 0.0, 0.0
+        normal[stuck, stuck] = 1.0
         while True:
             damped = normal.copy()
             damped.flat[:: len(prior) + 1] *= 1.0 + damping
