@@ -68,9 +68,9 @@ class Coding:
 
 
 def coding_of(frame: Frame) -> Coding:
-    """Coding of a frame; levels within half a code of the ends of its range are clipped."""
-    half = 0.6 * frame.code_step if frame.code_step > 0 else 1e-3
-    limits = (frame.code_floor + half, frame.code_ceiling - half)
+    """Coding of a frame; its two outermost codes are clipped ones, for BT.601 reserves the very last."""
+    end = 1.5 * frame.code_step if frame.code_step > 0 else 1e-3
+    limits = (frame.code_floor + end, frame.code_ceiling - end)
     if frame.averaged > 1:
         return Coding(0.0, frame.code_floor, limits)
     return Coding(frame.code_step, frame.code_floor, limits)
