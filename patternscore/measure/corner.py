@@ -90,7 +90,7 @@ def _shelf(strip: Strip, pile: Pile, gain: Complex, jitter: float) -> _Shelf:
     blurred = gain * np.exp(-2.0 * (np.pi * nu * jitter) ** 2)
     layout = lay_out([strip], pile)
     edges = edge_of(spotted(blurred, SPOTS), layout.reach(0))
-    profiles = np.stack([layout.profiles(edge).mean(axis=0) for edge in edges])
+    profiles = layout.profiles(edges).mean(axis=1)
     rates = slope_of(profiles)
     columns = np.stack([np.ones_like(profiles), profiles, rates], axis=1)
     gram = columns @ columns.transpose(0, 2, 1)

@@ -106,9 +106,18 @@ class Layout:
         return coarse.transpose(1, 0, 2).reshape(coarse.shape[1], -1)
 
     def profiles(self, edge: Array, pad: int = 0) -> Array:
-        """Profiles about each edge, from the response to one edge (``edge_of``): (edges, pad + bins + pad)."""
-        bins = np.arange(self.bins + 2 * pad) + (len(edge) // 2 + self.first - pad)
-        total = np.repeat(edge[bins][None], len(self.signs), axis=0)
+        """Profiles about each edge, from the response to one edge (``edge_of``).
+
+        Parameters
+        ----------
+        edge : (..., n) array
+
+        Returns
+        -------
+        (..., edges, pad + bins + pad) float64
+        """
+        bins = np.arange(self.bins + 2 * pad) + (edge.shape[-1] // 2 + self.first - pad)
+        total = np.repeat(edge[..., None, bins], len(self.signs), axis=-2)
         if self.neighbours:
             lags = np.array([part.lag for part in self.neighbours])
             factors = np.zeros((len(self.signs), len(lags)))
@@ -158,13 +167,13 @@ class Design:
 
 
 def _at(edge: Array, bins: Index, lags: Array) -> Array:
-    """Values some lags later, (lags, bins); between bins on a straight line, the plateau where the edge ends."""
+    """Values some lags later, (..., lags, bins); between bins on a straight line, the plateau where the edge ends."""
     whole = np.floor(lags)
     part = (lags - whole)[:, None]
     low = bins + whole.astype(np.int64)[:, None]
     np.maximum(low, 0, out=low)
-    np.minimum(low, len(edge) - 2, out=low)
-    return np.asarray(edge[low] * (1.0 - part) + edge[low + 1] * part)
+    np.minimum(low, edge.shape[-1] - 2, out=low)
+    return np.asarray(edge[..., low] * (1.0 - part) + edge[..., low + 1] * part)
 
 
 def lay_out(strips: list[Strip], pile: Pile, *, neighbours: bool = True) -> Layout:
