@@ -224,11 +224,12 @@ def refine(strip: Strip, model: Array, *, jitter: bool) -> Alignment:
 
 def _field_shift(strip: Strip, rest: Any, rate: Any) -> float:
     """How much later the edges lie in the odd lines than in the even ones, lines; across only."""
-    parity = (strip.start[..., None] + np.arange(strip.levels.shape[2])) % 2 == 1
-    against, power = rest * rate, rate * rate
-    odd = -float(against[parity].sum()) / max(float(power[parity].sum()), 1e-9)
-    even = -float(against[~parity].sum()) / max(float(power[~parity].sum()), 1e-9)
-    return odd - even
+    parity = ((strip.start[..., None] + np.arange(strip.levels.shape[2])) % 2).astype(np.float32).ravel()
+    slope, left = rate.ravel(), rest.ravel()
+    against, power = slope * left, slope * slope
+    odd, odd_power = float(against @ parity), float(power @ parity)
+    even, even_power = float(against.sum()) - odd, float(power.sum()) - odd_power
+    return even / max(even_power, 1e-9) - odd / max(odd_power, 1e-9)
 
 
 def _noise(rest: Any, moved: Array, power: Array) -> float:

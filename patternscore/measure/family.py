@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from functools import lru_cache
+from functools import lru_cache, partial
 
 import numpy as np
 import numpy.typing as npt
@@ -56,6 +56,8 @@ def around(start: Start, free: tuple[int, ...] = tuple(range(8))) -> Family:
     """Give the family about a member, some of its parameters free."""
     moving = np.array(free)
     nu = step_basis().nu
+    if free == (0, 4) and not start.theta[[1, 2, 3, 7]].any() and start.theta[5] >= OPEN[0]:
+        return Family(partial(_spot, start.scale), start.theta[moving], PRIOR[moving], LOWEST[moving], HIGHEST[moving])
 
     def shape(part: Array) -> tuple[Complex, Complex]:
         theta = start.theta.copy()
@@ -64,6 +66,14 @@ def around(start: Start, free: tuple[int, ...] = tuple(range(8))) -> Family:
         return gain, slopes if len(moving) == len(slopes) else slopes[moving]
 
     return Family(shape, start.theta[moving], PRIOR[moving], LOWEST[moving], HIGHEST[moving])
+
+
+def _spot(scale: float, part: Array) -> tuple[Complex, Complex]:
+    """Gaussian and delay alone, which is all that is free across the lines; as ``transfer`` without a limit."""
+    nu = step_basis().nu
+    square, turn = (nu / scale) ** 2, -2j * np.pi * nu
+    gain = np.exp(turn * float(part[1]) - float(part[0]) * square)
+    return gain, np.stack([-square * gain, turn * gain])
 
 
 def pole_frequency(theta: Array, scale: float) -> tuple[float, Array] | None:

@@ -52,6 +52,8 @@ class Strip:
         Across only: how much later an edge lies in the lines 1, 3, 5 ... than in the others, lines.
     levelled : bool
         Whether differences of level between the rows have been taken off.
+    binned : tuple or None
+        What ``bins`` found last, with the positions and levels that it was for.
     start : (edges, n) int
         First sample of each window cut.
     levels : (edges, n, window) float32
@@ -70,6 +72,7 @@ class Strip:
     shifts: Array = field(default_factory=lambda: np.zeros(1))
     field_shift: float = 0.0
     levelled: bool = False
+    binned: tuple[Array, Single, npt.NDArray[np.int32], Single] | None = None
     start: npt.NDArray[np.int64] = field(default_factory=lambda: np.zeros((1, 1), dtype=np.int64))
     levels: Single = field(default_factory=lambda: np.zeros((1, 1, 1), dtype=np.float32))
 
@@ -117,6 +120,8 @@ class Strip:
 
     def bins(self) -> tuple[npt.NDArray[np.int32], Single]:
         """Bin of each sample in a table of (edges, bins + 2), its ends for what lies outside, and distance from it."""
+        if self.binned is not None and self.binned[0] is self.position and self.binned[1] is self.levels:
+            return self.binned[2], self.binned[3]
         place = self.times()
         place *= np.float32(BINS)
         nearest = np.rint(place)
@@ -128,6 +133,7 @@ class Strip:
         np.maximum(index, 0, out=index)
         np.minimum(index, size - 1, out=index)
         index += (np.arange(len(index), dtype=np.int32) * np.int32(size))[:, None, None]
+        self.binned = self.position, self.levels, index, place
         return index, place
 
     def clipped_at(self, limits: tuple[float, float]) -> bool:
