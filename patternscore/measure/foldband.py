@@ -16,6 +16,7 @@ from patternscore.measure.stepshape import StepShape
 
 Array = npt.NDArray[np.float64]
 LIGHTEST = 0.05  # of the bars' contrast above dark bars: black that is taken for black
+SHARPER = 0.85  # part of the width of the bars' steps that may be the spot's
 EDGE_DOUBT = 1.2  # samples by which the picture's edge may come off the pace of the bars
 DELAY = 2.2  # samples by which the picture's end may come off nominal, as filters delay the signal
 
@@ -113,13 +114,20 @@ def unfolded_misfit(band: Band, start: float) -> Array:
     steps = np.diff(band.content)[1:]
     later = walls > begins[-1, 0]
     beyond = steps[later] @ band.shape.at(t[None, :] - walls[later, None])
-    shown = band.shape.at(t[None, :] - begins)
     # Walls that the picture's beginning may hide fall in with it.
     early = np.maximum(walls[None, ~later], begins)
     hidden = np.einsum("k,ckn->cn", steps[~later], band.shape.at(t[None, None, :] - early[:, :, None]))
-    rest = band.level - beyond - hidden - shown * band.content[1]
+    rest = band.level - beyond - hidden
+    # The spot is on the picture and not on blanking: the step from it may be sharper than those of the bars.
+    sharper = band.shape.without_spot(SHARPER * band.shape.width, limited=True)
+    left = np.concatenate([_beginning(band, rest, shape.at(t[None, :] - begins)) for shape in (band.shape, sharper)])
+    return np.asarray(left[np.argmin(np.sum(left * left, axis=1))])
+
+
+def _beginning(band: Band, rest: Array, shown: Array) -> Array:
+    """What is left where the picture is shown to the parts ``shown``, (c, n), and black elsewhere."""
+    rest = rest - shown * band.content[1]
     dark = 1.0 - shown
     # Black is what it is found to be, but never lighter than the dark bars.
     black = np.sum(dark * rest, axis=1) / np.maximum(np.sum(dark * dark, axis=1), 1e-3)
-    left = rest - dark * np.minimum(black, LIGHTEST)[:, None]
-    return np.asarray(left[np.argmin(np.sum(left * left, axis=1))])
+    return np.asarray(rest - dark * np.minimum(black, LIGHTEST)[:, None])

@@ -20,7 +20,6 @@ import numpy as np
 import numpy.typing as npt
 
 from patternscore.measure.foldband import Band
-from patternscore.measure.stepshape import StepShape
 
 Array = npt.NDArray[np.float64]
 Turn = Literal["ramp", "sine", "soft", "arch"]
@@ -90,7 +89,7 @@ def look_at(band: Band, share: float, blanked: bool) -> Look:
         Whether the step from blanking is seen through the response, as along the line.
     """
     spot = max(share * band.shape.width, NARROWEST)
-    response = _without_spot(band.shape, spot, blanked) if share > 0 else band.shape
+    response = band.shape.without_spot(spot, limited=blanked) if share > 0 else band.shape
     first, last = float(band.t[0]) - BEYOND, float(band.t[-1]) + BEYOND
     borders = np.arange(int((last - first) * PER) + 1) / PER + first
     away = band.t[None, :] - borders[:, None]
@@ -101,23 +100,6 @@ def look_at(band: Band, share: float, blanked: bool) -> Look:
     total = np.concatenate([[0.0], np.cumsum((level[1:] + level[:-1]) / 2.0)])
     ahead = _forward_place(band, borders)
     return Look(band, borders, ahead, reached[:-1] - reached[1:], pace * CELLS, level, total, band.content[0], blanked)
-
-
-def _without_spot(shape: StepShape, spot: float, limited: bool) -> StepShape:
-    """Step that the response alone would give: a Gaussian spot taken out of the step of both.
-
-    Along the line the grabber lets nothing through near the sample clock's half, where the spot could not be
-    taken out; across the lines the rest is taken for Gaussian.
-    """
-    if not limited:
-        return StepShape.gaussian(float(np.sqrt(max(shape.width**2 - spot**2, 0.01))))
-    fine = shape.fine
-    spread = np.fft.rfft(np.diff(shape.table))
-    omega = 2.0 * np.pi * np.fft.rfftfreq(shape.table.size - 1, 1.0 / fine)
-    fade = np.clip((1.05 * np.pi - omega) / (0.3 * np.pi), 0.0, 1.0)
-    gain = np.minimum(np.exp(np.minimum(0.5 * (spot * omega) ** 2, 5.0)), 12.0) * np.sin(0.5 * np.pi * fade) ** 2
-    steps = np.fft.irfft(spread * gain, shape.table.size - 1)
-    return StepShape(np.concatenate([[0.0], np.cumsum(steps)]), shape.width)
 
 
 def _picture(band: Band, pace: float, spot: float) -> Array:

@@ -79,11 +79,6 @@ class StepShape:
     table: Array
     width: float
 
-    @property
-    def fine(self) -> int:
-        """Points of the table per sample."""
-        return FINE
-
     @classmethod
     def gaussian(cls, width: float) -> StepShape:
         """Step seen by a Gaussian spot of a standard deviation in samples."""
@@ -108,6 +103,23 @@ class StepShape:
         rise = np.zeros_like(self.table)
         rise[2:-2] = (self.table[4:] - self.table[:-4]) * (FINE / 4.0)
         return _between(rise, tau)
+
+    def without_spot(self, spot: float, *, limited: bool) -> StepShape:
+        """Step that the response alone would give: a Gaussian spot taken out of the step of both.
+
+        Along the line (``limited``) the grabber lets nothing through near half the sample clock, where the
+        spot could not be taken out; across the lines the rest is taken for Gaussian.
+        """
+        if not limited:
+            return StepShape.gaussian(math.sqrt(max(self.width**2 - spot**2, 0.01)))
+        count = self.table.size - 1
+        omega = 2.0 * np.pi * np.fft.rfftfreq(count, 1.0 / FINE)
+        fade = np.minimum(np.maximum((1.05 * np.pi - omega) / (0.3 * np.pi), 0.0), 1.0)
+        gain = np.minimum(np.exp(np.minimum(0.5 * (spot * omega) ** 2, 5.0)), 12.0)
+        gain *= np.sin(0.5 * np.pi * fade) ** 2
+        steps = np.fft.irfft(np.fft.rfft(np.diff(self.table)) * gain, count)
+        width = math.sqrt(max(self.width**2 - spot**2, NARROWEST**2))
+        return StepShape(np.concatenate([[0.0], np.cumsum(steps)]), width)
 
     def wave(self, train: StepTrain) -> Array:
         """Sum of the train's steps over its samples, from dark (0) to light (1)."""
