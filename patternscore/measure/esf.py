@@ -52,10 +52,10 @@ class TransferCurve:
         drop = self.gain[k - 1] - self.gain[k]
         part = (self.gain[k - 1] - level) / drop
         step = self.frequency[k] - self.frequency[k - 1]
-        # The slope over a few points, as noise may flatten it between two.
+        # Noise may flatten the curve between two points: then the slope over a few more is the truer one.
         low, high = max(k - 3, 0), min(k + 2, len(self.gain) - 1)
-        slope = (self.gain[high] - self.gain[low]) / (self.frequency[high] - self.frequency[low])
-        sigma = self._sigma_at(k, part) / max(abs(float(slope)), 1e-6)
+        wide = (self.gain[low] - self.gain[high]) / (self.frequency[high] - self.frequency[low])
+        sigma = self._sigma_at(k, part) / max(float(wide), float(drop / step), 1e-6)
         return Estimate(float(self.frequency[k - 1] + part * step), sigma)
 
     def decibels(self, frequency: float) -> Estimate:
