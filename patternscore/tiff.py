@@ -26,7 +26,9 @@ def tiff_pictures(data: bytes, name: str, most: int) -> Iterator[Picture]:
     Raises
     ------
     UnscorableFrame
-        When there is no page that can be a frame.
+        When a page cannot be a frame.
+    ValueError
+        When there is no page, or its data are not there: the file is broken.
     """
     import tifffile
 
@@ -42,11 +44,14 @@ def tiff_pictures(data: bytes, name: str, most: int) -> Iterator[Picture]:
             yield _picture(page, data, number, name)
             given += 1
         if not given:
-            raise UnscorableFrame(f"{name}: holds no picture; grab or copy it again")
+            raise ValueError("no page is found")
 
 
 def _picture(page: Any, data: bytes, number: int, name: str) -> Picture:
-    check_size(int(page.imagewidth), int(page.imagelength), name)
+    width, height = int(page.imagewidth), int(page.imagelength)
+    if not (width and height):
+        raise ValueError("a page has no size")
+    check_size(width, height, name)
     if page.dtype is None or page.dtype.kind not in "ub" or page.bitspersample > 16:
         raise UnscorableFrame(f"{name}: {_kind(page)}; export it as 8- or 16-bit integers")
     turned = int(page.tags.valueof(274, 1)) not in (0, 1)

@@ -145,7 +145,7 @@ def test_colours_for_printing_are_refused_in_any_compression(load, compression):
 
 
 def test_a_file_without_pages_is_refused(load):
-    with pytest.raises(UnscorableFrame, match="holds no picture; grab or copy it again"):
+    with pytest.raises(UnscorableFrame, match="is broken or cut short; grab or copy it again"):
         load(b"II*\0\0\0\0\0")
 
 
