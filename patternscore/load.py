@@ -7,6 +7,7 @@ import re
 from collections.abc import Iterator
 from dataclasses import replace
 from pathlib import Path
+from typing import get_args
 
 from patternscore.decode import decode
 from patternscore.errors import UnscorableFrame, UsageError
@@ -70,6 +71,8 @@ def load_frames(
     most : int
         Pictures to read at most.
     """
+    if levels not in get_args(Levels):
+        raise UsageError(f'{levels} is no range of codes; name "video" or "full"')
     data = read_bytes(path, LARGEST_FILE)
     name = shown(Path(path).name)
     frames = list(_frames(data, name, standard, sample_rate, levels, most))

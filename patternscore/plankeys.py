@@ -159,7 +159,7 @@ def _wanted(kind: Any) -> str:
         return f"{len(inner)} numbers in brackets"
     if is_dataclass(kind):
         return "a table of its keys"
-    return {float: "a number", int: "a whole number", str: "a text in quotes"}.get(kind, "what the README says")
+    return {float: "a number", int: "a whole number", str: "a text in quotes"}.get(kind, "a value that fits")
 
 
 def _text(value: Any) -> str:

@@ -272,3 +272,8 @@ def test_a_clock_too_slow_for_the_samples_is_refused(load):
 def test_a_standard_that_is_none_is_refused(load):
     with pytest.raises(UsageError, match="819 is no scanning standard; name 525 or 625"):
         load(_padded(720, 480), standard="819")
+
+
+def test_a_range_that_is_none_is_refused(load):
+    with pytest.raises(UsageError, match='legal is no range of codes; name "video" or "full"'):
+        load(_padded(720, 480), levels="legal")
