@@ -10,11 +10,10 @@ from patternscore.warp import raster_warp
 
 
 def test_resolution_group_takes_its_share_of_the_card(benchmark):
-    # 13 ms of the 33 ms of a card; asserted only far above, for a shared machine may be slow at any time.
+    # 13 ms of the 33 ms of a card are its share; what it takes is recorded, not asserted.
     frame = grab(Chain(response=(responses.second_order(3.0, 0.4),), spot_lines=0.6, noise_db=40.0))
     located = Located(
         chart_plan(frame.standard), raster_warp(frame.raster), None, RasterEdges(None, None, None, None), 0.0
     )
     findings = benchmark.pedantic(read_edges, (frame, located), rounds=20, warmup_rounds=2)
     assert len(findings.readings) > 15
-    assert benchmark.stats.stats.min < 0.13
