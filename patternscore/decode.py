@@ -197,11 +197,8 @@ def deep_pixels(data: bytes) -> npt.NDArray[Any]:
     """
     import cv2
 
-    level = cv2.utils.logging.setLogLevel(cv2.utils.logging.LOG_LEVEL_SILENT)
-    try:
+    with silent_stderr():
         found = cv2.imdecode(np.frombuffer(data, np.uint8), cv2.IMREAD_UNCHANGED)
-    finally:
-        cv2.utils.logging.setLogLevel(level)
     if found is None:
         raise ValueError("its data cannot be decoded")
     pixels: npt.NDArray[Any] = np.asarray(found)
