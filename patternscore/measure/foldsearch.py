@@ -65,7 +65,7 @@ def _mirrored(band: Band, pace: float, length: float) -> npt.NDArray[np.float32]
     places = band.walls[None, :] * (pace / SHARP_RATIOS[:, None])
     values = band.shape.at(places[:, :, None] - before[None, None, :])
     steps = np.diff(band.content)
-    return (band.content[-1] - np.einsum("k,rkn->rn", steps, values)).astype(np.float32)
+    return np.asarray(band.content[-1] - np.einsum("k,rkn->rn", steps, values), dtype=np.float32)
 
 
 def bent_starts(view: View, looks: list[Look], most: int) -> Array:

@@ -87,7 +87,7 @@ class Bars:
 
 
 @lru_cache(maxsize=32)
-def transitions(ruler: Ruler) -> tuple[Array, Array]:
+def transitions(ruler: Ruler) -> tuple[npt.NDArray[np.intp], Array]:
     """Edges between unlike bars: indices of the boundaries, and +1 where light follows."""
     bits = np.asarray(ruler.bits)
     index = np.flatnonzero(bits[1:] != bits[:-1]) + 1

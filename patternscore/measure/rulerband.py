@@ -130,7 +130,7 @@ def straighten(frame: Frame, warp: Warp, ruler: Ruler, bend: Bend | None = None)
     away = np.rint(centre) - centre
     along_map = (index + lean * away).astype(np.float32)[None, :] + lean.astype(np.float32)[None, :] * steps
     maps = (along_map, across_map) if axis == "h" else (across_map, along_map)
-    rows = cv2.remap(frame.luma, maps[0], maps[1], cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
+    rows: npt.NDArray[Any] = cv2.remap(frame.luma, maps[0], maps[1], cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
     whole = across_map[0].min() >= 0 and across_map[-1].max() <= limit
     inside = np.ones_like(rows, dtype=bool) if whole else (across_map >= 0) & (across_map <= limit)
     used = _alike(rows, inside, whole)

@@ -86,7 +86,7 @@ class ScanMap:
     def linear(self, x: tuple[float, ...], weights: tuple[float, ...]) -> Estimate:
         """Weighted sum of frame coordinates, with its standard deviation."""
         row = np.asarray(weights) @ _fixed(x, self.axis)
-        spread = self.edge_sigma * float(np.sqrt(max(row @ self.covariance @ row, 0.0)))
+        spread = self.edge_sigma * float(np.sqrt(np.clip(row @ self.covariance @ row, 0.0, None)))
         return Estimate(float(row @ self.coefficients), spread)
 
     def speeds(self) -> tuple[Array, Array]:

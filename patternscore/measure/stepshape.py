@@ -171,7 +171,7 @@ def _summed(train: StepTrain, values: Callable[[Array], Array], reach: int) -> A
     # Steps lie within the samples, so that what is summed reaches at most ``reach`` beyond them.
     count = train.count
     padded = np.bincount((index - (train.low - reach - 1)).ravel(), signed.ravel(), count + 2 * reach + 2)
-    return padded[reach + 1 : reach + 1 + count]
+    return np.asarray(padded[reach + 1 : reach + 1 + count], dtype=np.float64)
 
 
 def _taus() -> Array:
