@@ -66,18 +66,26 @@ def _peaking(seen: _Seen) -> str | None:
 
 
 def _ringing(seen: _Seen) -> str | None:
+    if _even(seen):  # a symmetrical band limit rings too, and is no resonance
+        return None
     if seen.over("overshoot", 6.0) and (value := seen.value("ringing")) is not None:
         return f"Edges ring at {value:.1f} MHz: look for a resonance there, or an undamped peaking coil."
     return None
 
 
-def _preshoot(seen: _Seen) -> str | None:
+def _even(seen: _Seen) -> bool:
+    """Whether edges overshoot alike before and after."""
     before, after = seen.value("preshoot"), seen.value("overshoot")
     if before is None or after is None or not seen.over("preshoot", 5.0) or not seen.over("overshoot", 5.0):
+        return False
+    return abs(before - after) < 0.25 * max(before, after)
+
+
+def _preshoot(seen: _Seen) -> str | None:
+    if not _even(seen):
         return None
-    if abs(before - after) < 0.25 * max(before, after):
-        return f"Edges overshoot alike before ({before:.0f} %) and after ({after:.0f} %): a filter or a sharpener."
-    return None
+    before, after = seen.value("preshoot"), seen.value("overshoot")
+    return f"Edges overshoot alike before ({before:.0f} %) and after ({after:.0f} %): a filter or a sharpener."
 
 
 def _black(seen: _Seen) -> str | None:
