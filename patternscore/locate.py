@@ -150,7 +150,11 @@ def likeness(frame: Frame, plan: Plan, warp: Warp) -> float:
         return 1.0
     places = warp.to_frame(points)
     x, y = places.T
-    inside = (x > 3) & (x < frame.samples - 4) & (y > 3) & (y < frame.rows - 4)
+    # What lies beyond the active line is blanking, however large the picture is.
+    raster = frame.raster
+    left, right = max(raster.left, 0.0) + 3.0, min(raster.right, frame.samples - 1.0) - 3.0
+    top, bottom = max(raster.top, 0.0) + 3.0, min(raster.bottom, frame.rows - 1.0) - 3.0
+    inside = (x > left) & (x < right) & (y > top) & (y < bottom)
     if np.count_nonzero(inside) < max(8, 0.25 * len(points)):
         return 0.0
     smooth = cv2.blur(frame.luma, (3, 3))

@@ -162,3 +162,11 @@ def test_ends_of_the_raster_are_read_against_blanking():
 def test_no_end_is_claimed_where_the_picture_fills_the_frame():
     ends = locate(grab(PLAIN.changed(samples=640, sample_rate=135 / 11)), chart_plan(STANDARD_525)).edges
     assert (ends.left, ends.right, ends.top, ends.bottom) == (None, None, None, None)
+
+
+@pytest.mark.parametrize("size", [1.05, 1.065, 1.08])
+def test_a_picture_cut_by_blanking_is_still_known(size):
+    # 625: the active line leaves nine samples of blanking at each side, where a larger picture would go on.
+    sweep = Sweep(size=size, shift=0.005)
+    chain = PLAIN.changed(standard=STANDARD_625, sweep_h=sweep, sweep_v=sweep, noise_db=40.0)
+    assert locate(grab(chain), chart_plan(STANDARD_625)).misfit < 0.1
