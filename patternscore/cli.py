@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import errno
+import math
 import os
 import sys
 from pathlib import Path
@@ -10,15 +12,36 @@ from typing import Any, NoReturn
 import click
 
 from patternscore.errors import PatternscoreError, UnscorableFrame, UsageError
+from patternscore.files import check_place, shown
 
 DONE, UNSCORED, WRONG_USE, UNDER = 0, 1, 2, 3
+STOPPED = 130  # as shells count a program that was interrupted
 CAUTION = (
     "Tubes and their supplies hold lethal voltages, also unplugged: insulated trimming tool, one hand, discharge "
     "first, isolation transformer, never alone; local codes and licensed practice come first."
 )
 
 
-@click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100}, epilog=CAUTION)
+class _ReaderGone(Exception):
+    """Whoever read the output has closed the pipe."""
+
+
+class _Commands(click.Group):
+    """Group whose output may be cut off by its reader, which is no failure."""
+
+    def invoke(self, ctx: click.Context) -> Any:
+        try:
+            return super().invoke(ctx)
+        except BrokenPipeError:
+            raise _ReaderGone from None
+
+
+@click.group(
+    cls=_Commands,
+    context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100},
+    no_args_is_help=False,
+    epilog=CAUTION,
+)
 @click.version_option(package_name="patternscore", message="%(prog)s %(version)s")
 def commands() -> None:
     """Score grabbed frames of a test pattern: resolution, ringing, fold-back, geometry, levels, stability."""
@@ -79,21 +102,21 @@ def score_command(
     **reading: Any,
 ) -> int:
     """Measure frames and print their cards."""
-    reader = _reader(**reading)
+    if fail_under is not None and math.isnan(fail_under):
+        raise UsageError("--fail-under nan: is no score; give one from 0 to 100")
     if picture is not None and len(frames) > 1 and not together:
-        raise UsageError("--picture draws one frame: score one, or several --together")
+        raise UsageError("--picture draws one frame; score one, or several --together")
+    _check_picture(picture)
+    reader = _reader(**reading)
     status, lowest = DONE, 100.0
-    for group in [list(frames)] if together else [[path] for path in frames]:
+    groups = [list(frames)] if together else [[path] for path in frames]
+    for group in groups:
         try:
             card = _score_group(group, reader, picture, together)
-        except UnscorableFrame as error:
-            _complain(str(error))
-            status = UNSCORED
-            continue
-        except UsageError as error:
-            if len(frames) == 1 or together:
+        except Exception as error:
+            if len(groups) == 1 and not isinstance(error, UnscorableFrame):
                 raise
-            _complain(str(error))
+            _complain(str(error) if isinstance(error, PatternscoreError) else _stopped(group[0], error))
             status = UNSCORED
             continue
         _show(card, as_json)
@@ -101,6 +124,12 @@ def score_command(
     if status == DONE and fail_under is not None and lowest < fail_under:
         return UNDER
     return status
+
+
+def _stopped(path: Path, error: Exception) -> str:
+    from patternscore.compare import stopped
+
+    return stopped(path, error).reason
 
 
 def _score_group(paths: list[Path], reader: Any, picture: Path | None, together: bool) -> Any:
@@ -127,18 +156,10 @@ def _show(card: Any, as_json: bool) -> None:
     if as_json:
         click.echo(card.to_json())
         return
+    from patternscore.report.console import console_on
     from patternscore.report.text import print_card
 
-    print_card(card, _console())
-
-
-def _console(stderr: bool = False) -> Any:
-    """Console whose colours and width suit where it writes: 80 columns where that is no terminal."""
-    from rich.console import Console
-
-    stream = sys.stderr if stderr else sys.stdout
-    width = None if stream.isatty() else int(os.environ.get("COLUMNS", "80") or 80)
-    return Console(file=stream, width=width, highlight=False, soft_wrap=False)
+    print_card(card, console_on())
 
 
 @commands.command(name="compare")
@@ -171,21 +192,26 @@ def compare_command(
     from patternscore.load import list_frames
 
     _check_order(by)
+    _check_picture(picture)
+    for place in (csv_file, json_file):
+        if place is not None and str(place) != "-":
+            check_place(place)
     reader = _reader(**reading)
     paths = list_frames(folder)
     outcomes = _with_progress(paths, reader, jobs)
     cards = sorted_by([outcome.card for outcome in outcomes if outcome.card is not None], by, reader.limits)
-    failed = [(outcome.name, outcome.reason) for outcome in outcomes if outcome.card is None]
-    for _, reason in failed:
-        _complain(reason)
+    failed = [outcome for outcome in outcomes if outcome.card is None]
+    for outcome in failed:
+        _complain(outcome.reason)
     if str(json_file) == "-":
         for card in cards:
             click.echo(card.to_json())
     else:
+        from patternscore.report.console import console_on
         from patternscore.report.table import print_comparison
 
         first = by if by not in ("name", "setting", "score") else None
-        print_comparison(cards, [], reader.limits, _console(), first)
+        print_comparison(cards, reader.limits, console_on(), first)
         if json_file is not None:
             _write(json_file, "".join(card.to_json() + "\n" for card in cards))
     if csv_file is not None:
@@ -208,13 +234,25 @@ def _check_order(by: str) -> None:
         raise UsageError(f"--by {by}: no such reading; " + (f"did you mean {close[0]}?" if close else "see the README"))
 
 
+def _check_picture(path: Path | None) -> None:
+    """Refuse a picture's name before the work is done."""
+    if path is None:
+        return
+    from patternscore.report.canvas import picture_format
+
+    picture_format(path)
+    check_place(path)
+
+
 def _with_progress(paths: list[Path], reader: Any, jobs: int | None) -> Any:
     from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
 
     from patternscore.compare import score_files
+    from patternscore.report.console import console_on
 
     columns = (TextColumn("scoring"), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn())
-    with Progress(*columns, console=_console(stderr=True), transient=True, disable=not sys.stderr.isatty()) as progress:
+    quiet = not sys.stderr.isatty()
+    with Progress(*columns, console=console_on(stderr=True), transient=True, disable=quiet) as progress:
         task = progress.add_task("", total=len(paths))
         return score_files(paths, reader, jobs, lambda: progress.advance(task))
 
@@ -237,7 +275,7 @@ def _write(path: Path, text: str) -> None:
     try:
         path.write_text(text, encoding="utf-8")
     except OSError as error:
-        raise UsageError(f"{path}: cannot be written ({error.strerror}); name another place") from None
+        raise UsageError(f"{shown(path)}: cannot be written ({error.strerror}); name another place") from None
 
 
 @commands.command(name="chart")
@@ -268,24 +306,37 @@ def _complain(message: str) -> None:
 def main() -> NoReturn:
     """Run the command and leave with its exit status; whatever a user can cause is one line on stderr."""
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")  # small matrices: threads only cost time
+    for stream in ("stdout", "stderr"):
+        if getattr(sys, stream) is None:  # closed by whoever started the program
+            setattr(sys, stream, os.fdopen(os.open(os.devnull, os.O_WRONLY), "w"))
+    sys.exit(_status())
+
+
+def _status() -> int:
+    """Run the command; what went wrong is said, and told by the status."""
     try:
         status = commands.main(prog_name="patternscore", standalone_mode=False)
-    except click.exceptions.Abort:
+    except (click.exceptions.Abort, KeyboardInterrupt):
         _complain("stopped")
-        status = 130
+        return STOPPED
     except click.ClickException as error:
-        _complain(" ".join(error.format_message().split()) + "; see --help")
-        status = WRONG_USE
-    except UnscorableFrame as error:
-        _complain(str(error))
-        status = UNSCORED
+        _complain(shown(" ".join(error.format_message().split())).rstrip(".") + "; see --help")
+        return WRONG_USE
     except PatternscoreError as error:
         _complain(str(error))
-        status = WRONG_USE
-    except BrokenPipeError:
-        sys.stderr.close()
-        status = DONE
-    except KeyboardInterrupt:
-        _complain("stopped")
-        status = 130
-    sys.exit(status if isinstance(status, int) else DONE)
+        return UNSCORED if isinstance(error, UnscorableFrame) else WRONG_USE
+    except _ReaderGone:
+        _drop_output()
+        return DONE
+    except OSError as error:
+        if error.errno not in (errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EIO):
+            raise
+        _drop_output()
+        _complain(f"output cannot be written ({error.strerror}); make room, or print to another place")
+        return WRONG_USE
+    return status if isinstance(status, int) else DONE
+
+
+def _drop_output() -> None:
+    """Let what is still waiting to be printed go nowhere, so that leaving does not fail on it."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())

@@ -3,13 +3,15 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterator
-from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
+from collections.abc import Callable, Generator, Iterator
+from concurrent.futures import FIRST_COMPLETED, BrokenExecutor, Future, ProcessPoolExecutor, wait
 from dataclasses import dataclass
+from itertools import islice
 from pathlib import Path
 
 from patternscore.card import Card
 from patternscore.errors import PatternscoreError
+from patternscore.files import shown
 from patternscore.keys import KEYS
 from patternscore.limits import Limits
 from patternscore.plan import Plan
@@ -39,15 +41,23 @@ class Outcome:
 
 
 def score_file(path: Path, reader: Reader) -> Outcome:
-    """Read and score one file; bad input becomes a reason, never an exception."""
+    """Read and score one file; whatever goes wrong with it becomes a reason, never an exception."""
     from patternscore.load import load_frame
     from patternscore.score import score
 
     try:
         frame = load_frame(path, standard=reader.standard, sample_rate=reader.sample_rate, levels=reader.levels)
-        return Outcome(path.name, score(frame, reader.plan, limits=reader.limits))
+        return Outcome(frame.name, score(frame, reader.plan, limits=reader.limits))
     except PatternscoreError as error:
-        return Outcome(path.name, None, str(error))
+        return Outcome(shown(path.name), None, str(error))
+    except Exception as error:  # a want of memory, or a fault of ours: the others must not pay for it
+        return stopped(path, error)
+
+
+def stopped(path: Path, error: BaseException) -> Outcome:
+    """Outcome of a file whose scoring broke off."""
+    name = shown(path.name)
+    return Outcome(name, None, f"{name}: scoring stopped ({type(error).__name__}); score it alone to see why")
 
 
 def score_files(
@@ -84,32 +94,53 @@ def _ticked(outcome: Outcome, tick: Callable[[], None]) -> Outcome:
     return outcome
 
 
+_File = tuple[int, Path]
+
+
 def _pooled(paths: list[Path], reader: Reader, jobs: int) -> Iterator[tuple[int, Outcome]]:
-    """Keep a few files a process under way, so that memory does not grow with the folder."""
+    """Score on several processes; a file that kills its process costs only itself."""
+    waiting = enumerate(paths)
+    while True:
+        suspects = yield from _until_a_process_dies(waiting, reader, jobs)
+        if not suspects:
+            return
+        for index, path in suspects:
+            yield index, _apart(path, reader)
+
+
+def _until_a_process_dies(
+    waiting: Iterator[_File], reader: Reader, jobs: int
+) -> Generator[tuple[int, Outcome], None, list[_File]]:
+    """Keep a few files a process under way, so that memory does not grow with the folder.
+
+    Returns the files that were under way when a process died: none where all went well.
+    """
+    running: dict[Future[Outcome], _File] = {}
     with ProcessPoolExecutor(jobs, initializer=_one_thread) as pool:
-        waiting = iter(enumerate(paths))
-        running: dict[Future[Outcome], int] = {}
+        while True:
+            for file in islice(waiting, 3 * jobs - len(running)):
+                try:
+                    running[pool.submit(score_file, file[1], reader)] = file
+                except BrokenExecutor:
+                    return [*running.values(), file]
+            if not running:
+                return []
+            for future in wait(running, return_when=FIRST_COMPLETED).done:
+                if isinstance(future.exception(), BrokenExecutor):
+                    return list(running.values())
+                index, path = running.pop(future)
+                yield index, _result(future, path)
 
-        def start() -> None:
-            for index, path in waiting:
-                running[pool.submit(score_file, path, reader)] = index
-                if len(running) >= 3 * jobs:
-                    return
 
-        start()
-        while running:
-            done, _ = wait(running, return_when=FIRST_COMPLETED)
-            for future in done:
-                index = running.pop(future)
-                yield index, _result(future, paths[index])
-            start()
+def _apart(path: Path, reader: Reader) -> Outcome:
+    """Score a file in a process of its own, which it may kill."""
+    with ProcessPoolExecutor(1, initializer=_one_thread) as pool:
+        return _result(pool.submit(score_file, path, reader), path)
 
 
 def _result(future: Future[Outcome], path: Path) -> Outcome:
     error = future.exception()
-    if error is None:
-        return future.result()
-    return Outcome(path.name, None, f"{path.name}: scoring stopped ({type(error).__name__}); score it alone to see why")
+    return future.result() if error is None else stopped(path, error)
 
 
 def _one_thread() -> None:

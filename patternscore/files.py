@@ -60,5 +60,22 @@ def read_bytes(
     return data
 
 
+def check_place(path: Path) -> None:
+    """Refuse a place to write to before the work is done, where it can be told.
+
+    Raises
+    ------
+    UsageError
+        When the name is a folder's, or its folder is missing or may not be written to.
+    """
+    name, folder = shown(path), path.parent
+    if path.is_dir():
+        raise UsageError(f"{name}: is a folder; name a file in it")
+    if not folder.is_dir():
+        raise UsageError(f"{name}: cannot be written (no such folder); make the folder or name another place")
+    if not os.access(path if path.exists() else folder, os.W_OK):
+        raise UsageError(f"{name}: may not be written; check its permissions or name another place")
+
+
 def _size(count: int) -> str:
     return f"{count // 2**20} MiB" if count >= 2**20 else f"{count // 2**10} KiB"

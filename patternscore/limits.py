@@ -87,9 +87,20 @@ def _limit(key: str, entry: Any, name: str, before: Limit | None) -> Limit:
     if not isinstance(values.get("marks", True), bool):
         raise UsageError(f"{name}: [{key}] marks must be true or false; write marks = true")
     target = values.get("target")
+    _check_sense(name, key, values["full"], values["none"], target)
     return Limit(
         float(values["full"]),
         float(values["none"]),
         None if target is None else float(target),
         bool(values.get("marks", True)),
     )
+
+
+def _check_sense(name: str, key: str, full: float, none: float, target: float | None) -> None:
+    """Refuse limits that reward what is worse, as a file that changes only one of the two easily does."""
+    better = KEYS[key].better if target is None else "low"
+    if target is not None and full < 0:
+        raise UsageError(f"{name}: [{key}] full is a distance from the target; give 0 or more")
+    if (better == "low" and full > none) or (better == "high" and full < none):
+        side = "under" if better == "low" else "over"
+        raise UsageError(f"{name}: [{key}] full = {full:g} must lie {side} none = {none:g}; give both")

@@ -6,6 +6,7 @@ from pathlib import Path
 from typing import Any
 
 from patternscore.errors import UsageError
+from patternscore.files import shown
 
 # Dark on warm paper, one strong ink for what was measured, one for what was expected, one for what is wrong.
 PAPER, INK, FAINT = "#fbf8f1", "#2b2a27", "#c9c2b2"
@@ -45,15 +46,26 @@ def empty(axes: Any, title: str, reason: str) -> None:
     )
 
 
-def save(figure: Any, path: Path) -> None:
-    """Write the figure; the ending of the name says the format."""
+def picture_format(path: Path) -> str:
+    """Format that the ending of a picture's name says.
+
+    Raises
+    ------
+    UsageError
+        When it says none that can be drawn.
+    """
     suffix = path.suffix.lower()
     if suffix not in (".png", ".svg", ".pdf"):
-        raise UsageError(
-            f"{path.name}: {suffix or 'no ending'} is no picture format; end the name in .png, .svg or .pdf"
-        )
-    dates: dict[str, Any] = {"png": {}, "svg": {"Date": None}, "pdf": {"CreationDate": None}}[suffix[1:]]
+        ending = shown(suffix) or "no ending"
+        raise UsageError(f"{shown(path.name)}: {ending} is no picture format; end the name in .png, .svg or .pdf")
+    return suffix[1:]
+
+
+def save(figure: Any, path: Path) -> None:
+    """Write the figure; the ending of the name says the format."""
+    kind = picture_format(path)
+    dates: dict[str, Any] = {"png": {}, "svg": {"Date": None}, "pdf": {"CreationDate": None}}[kind]
     try:
-        figure.savefig(path, format=suffix[1:], metadata=dates or None)
+        figure.savefig(path, format=kind, metadata=dates or None)
     except OSError as error:
-        raise UsageError(f"{path}: cannot be written ({error.strerror}); name another place") from None
+        raise UsageError(f"{shown(path)}: cannot be written ({error.strerror}); name another place") from None

@@ -152,15 +152,11 @@ def _cell_text(cell: Cell | None) -> Text:
     return text + Text(f"{change:>8}", style="" if cell.best else "dim")
 
 
-def print_comparison(
-    cards: Sequence[Card], failed: Sequence[tuple[str, str]], limits: Limits, console: Console, first: str | None
-) -> None:
-    """Print the table, and under it the frames that could not be scored."""
+def print_comparison(cards: Sequence[Card], limits: Limits, console: Console, first: str | None = None) -> None:
+    """Print the table of cards; nothing where there are none."""
     if cards:
         console.print(comparison_view(cards, limits, console.width, first))
         console.print(Text("* best of the column   [change] against the row above, where more than noise", style="dim"))
-    for _, reason in failed:
-        console.print(Text(f"not scored: {reason}"))
 
 
 def rows_of(cards: Sequence[Card]) -> tuple[list[str], list[list[Any]]]:
