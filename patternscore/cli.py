@@ -140,7 +140,7 @@ def _score_group(paths: list[Path], reader: Any, picture: Path | None, together:
     if together:
         grabs = [frame for path in paths for frame in load_frames(path, **told)]
         if len(grabs) < 2:
-            raise UsageError("--together needs several frames: name several files, or one of several pages")
+            raise UsageError("--together needs several frames; name several files, or one of several pages")
         scored = score_together(grabs, reader.plan, limits=reader.limits)
     else:
         frame = load_frames(paths[0], **told, most=1)[0]
@@ -224,14 +224,11 @@ def compare_command(
 
 
 def _check_order(by: str) -> None:
-    from difflib import get_close_matches
+    from patternscore.keys import KEYS, meant
 
-    from patternscore.keys import KEYS
-
-    known = [*KEYS, "name", "setting", "score"]
+    known = ["name", "setting", "score", *KEYS]
     if by not in known:
-        close = get_close_matches(by, known, n=1, cutoff=0.4)
-        raise UsageError(f"--by {by}: no such reading; " + (f"did you mean {close[0]}?" if close else "see the README"))
+        raise UsageError(f"--by {shown(by)}: no such reading; {meant(by, known)}")
 
 
 def _check_picture(path: Path | None) -> None:
@@ -294,7 +291,7 @@ def chart_command(out: Path, standard: str, size: str, bits: str) -> int:
 
     width, _, height = size.lower().partition("x")
     if not (width.isdigit() and height.isdigit()):
-        raise UsageError(f"--size {size}: write it as WIDTHxHEIGHT, such as 5760x1920")
+        raise UsageError(f"--size {shown(size)}: is no size; write it as WIDTHxHEIGHT, such as 5760x1920")
     write_chart(out, standard_named(standard), int(width), int(height), int(bits))
     return DONE
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass
 
 GROUPS = ("resolution", "foldback", "geometry", "levels", "stability")
@@ -112,3 +113,14 @@ def group_of(name: str) -> str:
 def keys_of(group: str) -> list[Key]:
     """Entries of a group, in order."""
     return [key for key in _KEYS if key.group == group]
+
+
+def meant(word: str, known: Iterable[str]) -> str:
+    """Guess which of the known words was meant: those that begin with it, else the one spelt most alike."""
+    from difflib import get_close_matches
+
+    known = list(known)
+    begun = [each for each in known if word and each.startswith(word)]
+    if close := begun or get_close_matches(word, known, n=1):
+        return f"did you mean {' or '.join(close[:3])}?"
+    return f"known are {', '.join(known[:6])}{' ...' if len(known) > 6 else ''}"

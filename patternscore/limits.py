@@ -5,7 +5,6 @@ from __future__ import annotations
 import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass
-from difflib import get_close_matches
 from functools import cache
 from importlib.resources import files
 from pathlib import Path
@@ -13,10 +12,10 @@ from typing import Any
 
 from patternscore.errors import UsageError
 from patternscore.files import shown
-from patternscore.keys import KEYS
+from patternscore.keys import KEYS, meant
 from patternscore.tomlfile import read_toml
 
-_FIELDS = {"full", "none", "target", "marks"}
+_FIELDS = ("full", "none", "target", "marks")
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,19 +59,14 @@ def _parse(table: dict[str, Any], name: str, known: Limits | None = None) -> Lim
     return {key: _limit(key, entry, name, (known or {}).get(key)) for key, entry in table.items()}
 
 
-def _nearest(word: str, words: set[str] | Mapping[str, Any]) -> str:
-    close = get_close_matches(word, list(words), n=1, cutoff=0.4)
-    return f"did you mean {close[0]}?" if close else f"known are {', '.join(sorted(words)[:6])} ..."
-
-
 def _limit(key: str, entry: Any, name: str, before: Limit | None) -> Limit:
     if key not in KEYS:
-        raise UsageError(f"{name}: {shown(key)[:40]} is no reading; {_nearest(key, KEYS)}")
+        raise UsageError(f"{name}: {shown(key)[:40]} is no reading; {meant(key, KEYS)}")
     if not isinstance(entry, dict):
         raise UsageError(f"{name}: {key} needs full and none; write [{key}] and a line for each")
     for field in entry:
         if field not in _FIELDS:
-            raise UsageError(f"{name}: [{key}] has no field {shown(field)[:40]}; {_nearest(field, _FIELDS)}")
+            raise UsageError(f"{name}: [{key}] has no field {shown(field)[:40]}; {meant(field, _FIELDS)}")
     values: dict[str, Any] = {}
     if before is not None:
         values = {"full": before.full, "none": before.none, "target": before.target, "marks": before.marks}

@@ -109,7 +109,7 @@ def test_a_file_with_nothing_but_remarks_changes_nothing(written):
         ("[zzzz]\nfull = 3\n", "zzzz is no reading; known are "),
         ('["a\\nb"]\nfull = 3\n', "a?b is no reading; "),
         ("[overshoot]\nful = 3\n", "[overshoot] has no field ful; did you mean full?"),
-        ("[overshoot]\nweight = 3\n", "[overshoot] has no field weight; known are full, marks, none, target"),
+        ("[overshoot]\nweight = 3\n", "[overshoot] has no field weight; known are full, none, target, marks"),
         ("overshoot = 3\n", "overshoot needs full and none; write [overshoot] and a line for each"),
         ("[[overshoot]]\nfull = 3\n", "overshoot needs full and none; "),
         ('[overshoot]\nfull = "3"\n', "[overshoot] needs a number for full; write full = 3.5"),
